@@ -1,11 +1,11 @@
 #include "core/threads.h"
 
-#include <sched.h>
-
 #include <algorithm>
 #include <fstream>
 #include <string>
 #include <thread>
+
+#include <sched.h>
 
 #ifdef LEADSMAN_OPENMP
 #include <omp.h>

@@ -14,10 +14,10 @@ enum class ActivationKind {
   kNone,
   kRelu,
   kRelu6,
-  kLeakyRelu,    ///< slope of the negative side in `parameter`
-  kGelu,         ///< x * Phi(x), exact, through erf (Hendrycks & Gimpel 2016)
-  kGeluTanh,     ///< the tanh approximation of the same paper
-  kSilu,         ///< x * sigmoid(x)
+  kLeakyRelu,  ///< slope of the negative side in `parameter`
+  kGelu,       ///< x * Phi(x), exact, through erf (Hendrycks & Gimpel 2016)
+  kGeluTanh,   ///< the tanh approximation of the same paper
+  kSilu,       ///< x * sigmoid(x)
   kSigmoid,
   kHardSigmoid,  ///< relu6(x + 3) / 6 (Howard et al. 2019)
   kHardSwish,    ///< x * relu6(x + 3) / 6 (Howard et al. 2019)

@@ -5,6 +5,7 @@
 #pragma once
 
 #include <cstddef>
+#include <initializer_list>
 #include <limits>
 #include <map>
 #include <memory>
@@ -77,7 +78,7 @@ struct Cost {
 /// Memory of one call. Inputs and output never overlap unless a kernel says runs_in_place().
 struct KernelCall {
   std::span<const ConstTensorView> inputs;
-  TensorView output;             ///< written in full, never read
+  TensorView output;                ///< written in full, never read
   const float* residual = nullptr;  ///< same layout as the output; set iff the epilogue wants one
   std::byte* workspace = nullptr;   ///< workspace_bytes(threads) bytes, aligned to 64
   int threads = 1;
@@ -137,5 +138,8 @@ Attributes complete_attributes(const Contract& contract, const Attributes& given
 /// Throws Error(kInput) unless `actual` equals `expected`:
 /// "weight has shape [64, 3, 7, 7], expected [64, 1, 7, 7]".
 void require_shape(std::string_view what, const Shape& actual, const Shape& expected);
+/// Throws Error(kInput) unless the rank is one of `ranks`:
+/// "input has shape [1, 10], expected rank 4".
+void require_rank(std::string_view what, const Shape& actual, std::initializer_list<int> ranks);
 
 }  // namespace leadsman::ops

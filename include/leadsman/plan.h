@@ -42,8 +42,8 @@ struct LayerSummary {
 struct StepSummary {
   std::vector<std::string> layers;  ///< in graph order; the last one's output is the step's
   std::string operator_name;
-  std::string strategy;                ///< name of the chosen kernel
-  std::vector<std::string> refusals;   ///< "winograd: stride is 2, needs 1"
+  std::string strategy;               ///< name of the chosen kernel
+  std::vector<std::string> refusals;  ///< "winograd: stride is 2, needs 1"
   Shape output;
   std::int64_t macs = 0;
 };

@@ -1,0 +1,12 @@
+// y = x W^T + b over the channels of each position. Weights come as [O, C].
+#pragma once
+
+#include "ops/operator.h"
+
+namespace leadsman::ops {
+
+const Operator& linear_operator();
+
+const Strategy& linear_reference();
+
+}  // namespace leadsman::ops
