@@ -44,6 +44,7 @@ struct WeightSpec {
   std::string_view role;  ///< "weight", "bias", "mean", ...
   bool required = true;
   std::string_view meaning;
+  bool trained = true;  ///< false: a running statistic, not counted among the parameters
 };
 
 struct Contract {

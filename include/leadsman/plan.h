@@ -65,6 +65,9 @@ class Plan {
   const std::vector<std::string>& input_names() const;
   const std::vector<Shape>& input_shapes() const;
   const std::vector<std::string>& output_names() const;
+  /// Trained values of the graph's layers, a shared tensor counted once.
+  std::int64_t parameters() const;
+  std::int64_t macs() const;
   /// Names that hooks may ask for: observed layers, and layers that end a step anyway.
   std::vector<std::string> observable() const;
   int threads() const;

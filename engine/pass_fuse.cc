@@ -1,0 +1,130 @@
+// Rewrites, each a small function that says whether it took the following step in.
+#include <algorithm>
+#include <cmath>
+
+#include "engine/plan_state.h"
+
+namespace leadsman::internal {
+namespace {
+
+class Fuser {
+ public:
+  explicit Fuser(PlanState& plan) : plan_(plan), absorbed_(plan.steps.size(), false) {
+    readers_.resize(plan.values.size());
+    producer_.assign(plan.values.size(), kNobody);
+    for (std::size_t s = 0; s < plan.steps.size(); ++s) {
+      producer_[plan.steps[s].output] = s;
+      for (const ValueId input : plan.steps[s].inputs) readers_[input].push_back(s);
+    }
+  }
+
+  void run() {
+    for (std::size_t s = 0; s < plan_.steps.size(); ++s) {
+      if (!absorbed_[s]) grow(s);
+    }
+    std::vector<Step> kept;
+    for (std::size_t s = 0; s < plan_.steps.size(); ++s) {
+      if (!absorbed_[s]) kept.push_back(std::move(plan_.steps[s]));
+    }
+    plan_.steps = std::move(kept);
+  }
+
+ private:
+  static constexpr std::size_t kNobody = static_cast<std::size_t>(-1);
+
+  // Takes in the only reader of the step's output, again and again.
+  void grow(std::size_t s) {
+    Step& step = plan_.steps[s];
+    if (step.op->is_view(step.context)) return;
+    while (true) {
+      const Value& out = plan_.values[step.output];
+      if (out.observed || out.is_output || readers_[step.output].size() != 1) return;
+      const std::size_t r = readers_[step.output].front();
+      Step& reader = plan_.steps[r];
+      if (!(drop_identity(reader) || fold_batch_norm(step, reader) || add_residual(s, reader) ||
+            append_activation(step, reader))) {
+        return;
+      }
+      step.layers.insert(step.layers.end(), reader.layers.begin(), reader.layers.end());
+      step.output = reader.output;
+      step.macs += reader.macs;
+      producer_[step.output] = s;
+      absorbed_[r] = true;
+    }
+  }
+
+  static bool drop_identity(const Step& reader) { return reader.op->contract().name == "identity"; }
+
+  // y = gamma (W x + b - mean) / sqrt(var + eps) + beta is again of the form W' x + b' (Ioffe &
+  // Szegedy 2015, at inference). Scales in double, so that the weights are rounded once.
+  static bool fold_batch_norm(Step& step, const Step& reader) {
+    const std::string_view op = step.op->contract().name;
+    if (reader.op->contract().name != "batch_norm" || (op != "conv2d" && op != "linear") ||
+        step.residual || step.epilogue.activation.kind != ops::ActivationKind::kNone) {
+      return false;
+    }
+    const Tensor* gamma = reader.context.weight("weight");
+    const Tensor* beta = reader.context.weight("bias");
+    const Tensor& mean = *reader.context.weight("mean");
+    const Tensor& variance = *reader.context.weight("variance");
+    const double eps = reader.context.attributes.number("eps");
+    Tensor weight = *step.context.weight("weight");
+    const std::int64_t channels = weight.shape()[0];
+    Tensor bias = step.context.weight("bias") ? *step.context.weight("bias") : Tensor({channels});
+    float* w = weight.mutable_data();
+    float* b = bias.mutable_data();
+    const std::int64_t length = weight.elements() / channels;
+    for (std::int64_t o = 0; o < channels; ++o) {
+      const double scale = (gamma ? static_cast<double>(gamma->data()[o]) : 1.0) /
+                           std::sqrt(static_cast<double>(variance.data()[o]) + eps);
+      for (std::int64_t k = 0; k < length; ++k) {
+        w[o * length + k] = static_cast<float>(static_cast<double>(w[o * length + k]) * scale);
+      }
+      b[o] = static_cast<float>((static_cast<double>(b[o]) - static_cast<double>(mean.data()[o])) *
+                                    scale +
+                                (beta ? static_cast<double>(beta->data()[o]) : 0.0));
+    }
+    step.context.weights["weight"] = weight;
+    step.context.weights["bias"] = bias;
+    return true;
+  }
+
+  // The other summand must exist by the time the step runs.
+  bool add_residual(std::size_t s, const Step& reader) {
+    Step& step = plan_.steps[s];
+    if (reader.op->contract().name != "add" || step.op->contract().name == "add" ||
+        !step.op->takes_epilogue() || step.residual ||
+        step.epilogue.activation.kind != ops::ActivationKind::kNone) {
+      return false;
+    }
+    const ValueId other = reader.inputs[reader.inputs[0] == step.output ? 1 : 0];
+    if (other == step.output) return false;
+    if (producer_[other] != kNobody && producer_[other] >= s) return false;
+    step.residual = other;
+    step.epilogue.has_residual = true;
+    return true;
+  }
+
+  static bool append_activation(Step& step, const Step& reader) {
+    if (reader.op->contract().name != "activation" || !step.op->takes_epilogue() ||
+        step.epilogue.activation.kind != ops::ActivationKind::kNone) {
+      return false;
+    }
+    step.epilogue.activation = {ops::activation_kind(reader.context.attributes.text("kind")),
+                                static_cast<float>(reader.context.attributes.number("slope"))};
+    return true;
+  }
+
+  PlanState& plan_;
+  std::vector<bool> absorbed_;
+  std::vector<std::vector<std::size_t>> readers_;  // steps, by value
+  std::vector<std::size_t> producer_;              // step, by value
+};
+
+}  // namespace
+
+void fuse_steps(PlanState& plan) {
+  Fuser(plan).run();
+}
+
+}  // namespace leadsman::internal

@@ -1,0 +1,67 @@
+#include <algorithm>
+#include <cstring>
+
+#include "core/threads.h"
+#include "engine/plan_state.h"
+
+namespace leadsman::internal {
+namespace {
+
+class CopyKernel final : public ops::Kernel {
+ public:
+  void run(const ops::KernelCall& call) const override {
+    std::memcpy(call.output.data, call.inputs[0].data,
+                static_cast<std::size_t>(call.output.shape.elements()) * sizeof(float));
+  }
+};
+
+void select_kernel(Step& step, bool reference) {
+  const auto strategies = step.op->strategies();
+  const ops::Strategy* chosen = strategies.back();
+  if (!reference) {
+    for (const ops::Strategy* strategy : strategies) {
+      const std::string refusal = strategy->refusal(step.context);
+      if (refusal.empty()) {
+        chosen = strategy;
+        break;
+      }
+      step.refusals.push_back(std::string(strategy->name()) + ": " + refusal);
+    }
+  }
+  step.strategy = chosen->name();
+  step.kernel = chosen->prepare(step.context, step.epilogue);
+}
+
+std::size_t weights_size(const ops::OpContext& context) {
+  std::size_t bytes = 0;
+  for (const auto& [role, tensor] : context.weights) {
+    bytes += static_cast<std::size_t>(tensor.elements()) * sizeof(float);
+  }
+  return bytes;
+}
+
+}  // namespace
+
+std::unique_ptr<ops::Kernel> make_copy_kernel() {
+  return std::make_unique<CopyKernel>();
+}
+
+void select_kernels(PlanState& plan) {
+  for (Step& step : plan.steps) {
+    if (step.op->is_view(step.context)) {
+      // A hook may overwrite what it sees, and the input may have other readers.
+      step.is_view = !plan.values[step.output].observed;
+      step.strategy = step.is_view ? "view" : "copy";
+      if (!step.is_view) step.kernel = make_copy_kernel();
+      continue;
+    }
+    select_kernel(step, plan.options.reference_kernels);
+    plan.packed_bytes += step.kernel->packed_bytes();
+    if (step.kernel->packed_bytes() == 0) plan.weight_bytes += weights_size(step.context);
+    plan.workspace_bytes =
+        std::max(plan.workspace_bytes, step.kernel->workspace_bytes(plan.options.threads));
+    step.context.weights.clear();
+  }
+}
+
+}  // namespace leadsman::internal
