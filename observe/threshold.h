@@ -1,0 +1,36 @@
+// How large a difference rounding alone can make at one layer.
+//
+// The model. A floating-point sum of K products errs like a random walk: its relative error grows
+// as sqrt(K) * u, u = 2^-24 (probabilistic analysis: Higham & Mary 2019, SIAM J. Sci. Comput. 41),
+// measured against the root of the sum of the squared products. Where the products cancel, the
+// output is smaller than that root, and the error relative to the output is larger by their
+// ratio, the layer's `gain`:
+//
+//   gain = sqrt(sum over outputs of sum_k (w_k x_k)^2) / ||y||, at least 1.
+//
+// The threshold on the relative L2 error of a layer whose inputs are exact is
+//
+//   u * (kSumConstant * sqrt(K) * gain + kFunctionUlps)
+//
+// with a second term for the rounding of the result and of functions such as exp. The constants
+// cover both libraries' errors; what they leave as a margin is measured in
+// tests/observe/threshold_test.cc. The gain is also by how much independent relative errors of the
+// inputs grow on their way through the layer, which is what chained thresholds are made of.
+#pragma once
+
+#include <span>
+
+#include "leadsman/graph.h"
+
+namespace leadsman {
+
+struct RoundingModel {
+  double own = 0.0;   ///< relative L2 error that the layer itself may add
+  double gain = 1.0;  ///< growth of the relative error of its inputs
+};
+
+/// `reduction` is the layer's cost().reduction. `inputs` and `output` are the reference's.
+RoundingModel rounding_model(const Layer& layer, const WeightMap& weights, std::int64_t reduction,
+                             std::span<const Tensor> inputs, const Tensor& output, int threads);
+
+}  // namespace leadsman
