@@ -18,6 +18,10 @@ Shape::Shape(std::span<const std::int64_t> sizes) {
   bool empty = false;
   for (std::size_t i = 0; i < sizes.size(); ++i) {
     if (sizes[i] < 0) throw_input("a negative size in a shape: " + std::to_string(sizes[i]));
+    // Beside a zero too, so that sums of sizes cannot overflow anywhere.
+    if (sizes[i] > kMaxElements) {
+      throw_input("a size above 2^40 in a shape: " + std::to_string(sizes[i]));
+    }
     sizes_[i] = sizes[i];
     if (sizes[i] == 0) empty = true;
   }
