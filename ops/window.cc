@@ -1,6 +1,7 @@
 #include "ops/window.h"
 
 #include <string>
+#include <utility>
 
 #include "leadsman/error.h"
 
@@ -22,7 +23,37 @@ std::int64_t output_extent(const char* axis, std::int64_t size, std::int64_t ker
   return count;
 }
 
+AttributeSpec size_spec(std::string_view name, AttributeType type,
+                        std::optional<AttributeValue> fallback, std::string_view meaning,
+                        double minimum) {
+  return {.name = name,
+          .type = type,
+          .fallback = std::move(fallback),
+          .meaning = meaning,
+          .minimum = minimum,
+          .maximum = 65535,
+          .choices = {}};
+}
+
 }  // namespace
+
+AttributeSpec kernel_size_spec() {
+  return size_spec("kernel_size", AttributeType::kPair, {}, "size of the window", 1);
+}
+AttributeSpec stride_spec() {
+  return size_spec("stride", AttributeType::kPair, std::int64_t{1}, "step of the window", 1);
+}
+AttributeSpec pooling_stride_spec() {
+  return size_spec("stride", AttributeType::kPair, std::int64_t{0},
+                   "step of the window; 0: the kernel's size", 0);
+}
+AttributeSpec padding_spec(std::string_view meaning) {
+  return size_spec("padding", AttributeType::kPadding, std::int64_t{0}, meaning, 0);
+}
+AttributeSpec dilation_spec() {
+  return size_spec("dilation", AttributeType::kPair, std::int64_t{1},
+                   "distance between the window's taps", 1);
+}
 
 WindowAttributes::WindowAttributes(const Attributes& attributes) : dilation{1, 1} {
   const auto& kernel_size = attributes.integers("kernel_size");
@@ -42,6 +73,15 @@ std::pair<std::int64_t, std::int64_t> WindowAttributes::output_size(std::int64_t
                         ceil_mode),
           output_extent("width", w, kernel[1], stride[1], dilation[1], padding[1], padding[3],
                         ceil_mode)};
+}
+
+void WindowAttributes::require_padding_below_kernel() const {
+  for (std::size_t side = 0; side < 4; ++side) {
+    const std::int64_t size = kernel[side % 2];
+    if (padding[side] < size) continue;
+    throw_input("padding of " + std::to_string(padding[side]) + " is not below the kernel's " +
+                (side % 2 == 0 ? "height " : "width ") + std::to_string(size));
+  }
 }
 
 }  // namespace leadsman::ops

@@ -2,6 +2,7 @@
 #include "core/threads.h"
 #include "leadsman/tensor.h"
 #include "ops/conv2d/conv2d.h"
+#include "ops/strategy_of.h"
 
 namespace leadsman::ops {
 namespace {
@@ -55,20 +56,10 @@ class ReferenceKernel final : public Kernel {
   Epilogue epilogue_;
 };
 
-class Reference final : public Strategy {
- public:
-  std::string_view name() const override { return "reference"; }
-  std::string refusal(const OpContext&) const override { return {}; }
-  std::unique_ptr<Kernel> prepare(const OpContext& context,
-                                  const Epilogue& epilogue) const override {
-    return std::make_unique<ReferenceKernel>(context, epilogue);
-  }
-};
-
 }  // namespace
 
 const Strategy& conv2d_reference() {
-  static const Reference instance;
+  static const StrategyOf<ReferenceKernel> instance("reference");
   return instance;
 }
 

@@ -1,5 +1,6 @@
 #include "core/threads.h"
 #include "ops/linear/linear.h"
+#include "ops/strategy_of.h"
 
 namespace leadsman::ops {
 namespace {
@@ -41,20 +42,10 @@ class ReferenceKernel final : public Kernel {
   Epilogue epilogue_;
 };
 
-class Reference final : public Strategy {
- public:
-  std::string_view name() const override { return "reference"; }
-  std::string refusal(const OpContext&) const override { return {}; }
-  std::unique_ptr<Kernel> prepare(const OpContext& context,
-                                  const Epilogue& epilogue) const override {
-    return std::make_unique<ReferenceKernel>(context, epilogue);
-  }
-};
-
 }  // namespace
 
 const Strategy& linear_reference() {
-  static const Reference instance;
+  static const StrategyOf<ReferenceKernel> instance("reference");
   return instance;
 }
 
