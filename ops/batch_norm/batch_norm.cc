@@ -1,0 +1,61 @@
+#include "ops/batch_norm/batch_norm.h"
+
+#include <array>
+
+namespace leadsman::ops {
+namespace {
+
+class BatchNorm final : public Operator {
+ public:
+  const Contract& contract() const override {
+    static const Contract contract{
+        .name = "batch_norm",
+        .meaning =
+            "normalisation of each channel by its statistics over the training set "
+            "(Ioffe & Szegedy 2015)",
+        .min_inputs = 1,
+        .max_inputs = 1,
+        .attributes = {{.name = "eps",
+                        .type = AttributeType::kNumber,
+                        .fallback = 1e-5,
+                        .meaning = "added to the variance",
+                        .minimum = 0,
+                        .maximum = 1,
+                        .choices = {}}},
+        .weights = {{"weight", false, "[C], factor; 1 when absent"},
+                    {"bias", false, "[C], summand; 0 when absent"},
+                    {"mean", true, "[C]"},
+                    {"variance", true, "[C]"}},
+    };
+    return contract;
+  }
+
+  Shape output_shape(const OpContext& context) const override {
+    const Shape& input = context.inputs[0];
+    require_rank("input", input, {2, 4});
+    for (const WeightSpec& spec : contract().weights) {
+      if (const Tensor* weight = context.weight(spec.role)) {
+        require_shape(spec.role, weight->shape(), {channel_count(input)});
+      }
+    }
+    return input;
+  }
+
+  Cost cost(const OpContext& /*context*/) const override { return {}; }
+
+  std::span<const Strategy* const> strategies() const override {
+    static const std::array<const Strategy*, 2> all{&batch_norm_rows(), &batch_norm_reference()};
+    return all;
+  }
+
+  bool takes_epilogue() const override { return true; }
+};
+
+}  // namespace
+
+const Operator& batch_norm_operator() {
+  static const BatchNorm instance;
+  return instance;
+}
+
+}  // namespace leadsman::ops
