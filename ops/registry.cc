@@ -2,16 +2,46 @@
 #include <algorithm>
 #include <array>
 
+#include "ops/adaptive_avg_pool/adaptive_avg_pool.h"
+#include "ops/add/add.h"
+#include "ops/avg_pool/avg_pool.h"
+#include "ops/batch_norm/batch_norm.h"
+#include "ops/class_token/class_token.h"
+#include "ops/concat/concat.h"
 #include "ops/conv2d/conv2d.h"
+#include "ops/flatten/flatten.h"
+#include "ops/identity/identity.h"
+#include "ops/image_to_tokens/image_to_tokens.h"
 #include "ops/linear/linear.h"
+#include "ops/max_pool/max_pool.h"
+#include "ops/mean/mean.h"
+#include "ops/mul/mul.h"
 #include "ops/operator.h"
+#include "ops/position_embed/position_embed.h"
+#include "ops/select/select.h"
+#include "ops/softmax/softmax.h"
 
 namespace leadsman::ops {
 
 std::span<const Operator* const> all_operators() {
   static const std::array all{
+      &adaptive_avg_pool_operator(),
+      &add_operator(),
+      &avg_pool_operator(),
+      &batch_norm_operator(),
+      &class_token_operator(),
+      &concat_operator(),
       &conv2d_operator(),
+      &flatten_operator(),
+      &identity_operator(),
+      &image_to_tokens_operator(),
       &linear_operator(),
+      &max_pool_operator(),
+      &mean_operator(),
+      &mul_operator(),
+      &position_embed_operator(),
+      &select_operator(),
+      &softmax_operator(),
   };
   return all;
 }
