@@ -1,6 +1,5 @@
 # Boards with a 64-bit Arm processor, built on a Debian x86 machine (g++-aarch64-linux-gnu) as one
-# static file to copy over. Tests run here under user emulation (qemu-user-static). Run
-# cmake/arm_libraries.sh once before: it fetches the libraries that have no cross package.
+# static file to copy over. Tests run here under user emulation (qemu-user-static).
 set(CMAKE_SYSTEM_NAME Linux)
 set(CMAKE_SYSTEM_PROCESSOR aarch64)
 set(CMAKE_C_COMPILER aarch64-linux-gnu-gcc)
@@ -18,8 +17,7 @@ if(LEADSMAN_QEMU)
 endif()
 
 # Programs and headers of the build machine (the libraries used are headers only), no libraries.
-set(CMAKE_LIBRARY_ARCHITECTURE aarch64-linux-gnu)
-set(CMAKE_FIND_ROOT_PATH ${CMAKE_CURRENT_LIST_DIR}/../build/arm-libraries /usr/aarch64-linux-gnu)
+set(CMAKE_FIND_ROOT_PATH /usr/aarch64-linux-gnu)
 set(CMAKE_FIND_ROOT_PATH_MODE_PROGRAM NEVER)
 set(CMAKE_FIND_ROOT_PATH_MODE_INCLUDE BOTH)
 set(CMAKE_FIND_ROOT_PATH_MODE_LIBRARY ONLY)
