@@ -1,19 +1,9 @@
 #include <algorithm>
-#include <cstring>
 
-#include "core/threads.h"
 #include "engine/plan_state.h"
 
 namespace leadsman::internal {
 namespace {
-
-class CopyKernel final : public ops::Kernel {
- public:
-  void run(const ops::KernelCall& call) const override {
-    std::memcpy(call.output.data, call.inputs[0].data,
-                static_cast<std::size_t>(call.output.shape.elements()) * sizeof(float));
-  }
-};
 
 void select_kernel(Step& step, bool reference) {
   const auto strategies = step.op->strategies();
@@ -42,17 +32,13 @@ std::size_t weights_size(const ops::OpContext& context) {
 
 }  // namespace
 
-std::unique_ptr<ops::Kernel> make_copy_kernel() {
-  return std::make_unique<CopyKernel>();
-}
-
 void select_kernels(PlanState& plan) {
   for (Step& step : plan.steps) {
-    if (step.op->is_view(step.context)) {
-      // A hook may overwrite what it sees, and the input may have other readers.
-      step.is_view = !plan.values[step.output].observed;
-      step.strategy = step.is_view ? "view" : "copy";
-      if (!step.is_view) step.kernel = make_copy_kernel();
+    // A hook may overwrite what it sees, and the input may have other readers: an observed view is
+    // computed as a copy, in place where it is the last reader.
+    step.is_view = step.op->is_view(step.context) && !plan.values[step.output].observed;
+    if (step.is_view) {
+      step.strategy = "view";
       continue;
     }
     select_kernel(step, plan.options.reference_kernels);

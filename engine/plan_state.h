@@ -68,7 +68,4 @@ void select_kernels(PlanState& plan);
 /// pass_memory.cc: lifetimes to arena offsets.
 void lay_memory(PlanState& plan);
 
-/// The same bytes elsewhere: stands in for a view that a hook may overwrite.
-std::unique_ptr<ops::Kernel> make_copy_kernel();
-
 }  // namespace leadsman::internal
