@@ -18,34 +18,10 @@ class Conv2d final : public Operator {
         .max_inputs = 1,
         .attributes =
             {
-                {.name = "kernel_size",
-                 .type = AttributeType::kPair,
-                 .fallback = {},
-                 .meaning = "size of the window",
-                 .minimum = 1,
-                 .maximum = 65535,
-                 .choices = {}},
-                {.name = "stride",
-                 .type = AttributeType::kPair,
-                 .fallback = std::int64_t{1},
-                 .meaning = "step of the window",
-                 .minimum = 1,
-                 .maximum = 65535,
-                 .choices = {}},
-                {.name = "padding",
-                 .type = AttributeType::kPadding,
-                 .fallback = std::int64_t{0},
-                 .meaning = "zeros around the image",
-                 .minimum = 0,
-                 .maximum = 65535,
-                 .choices = {}},
-                {.name = "dilation",
-                 .type = AttributeType::kPair,
-                 .fallback = std::int64_t{1},
-                 .meaning = "distance between the window's taps",
-                 .minimum = 1,
-                 .maximum = 65535,
-                 .choices = {}},
+                kernel_size_spec(),
+                stride_spec(),
+                padding_spec("zeros around the image"),
+                dilation_spec(),
                 {.name = "groups",
                  .type = AttributeType::kInteger,
                  .fallback = std::int64_t{1},
@@ -89,7 +65,7 @@ class Conv2d final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    static const std::array<const Strategy*, 1> all{&conv2d_reference()};
+    static const std::array<const Strategy*, 2> all{&conv2d_implicit(), &conv2d_reference()};
     return all;
   }
 

@@ -37,7 +37,7 @@ class Linear final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    static const std::array<const Strategy*, 1> all{&linear_reference()};
+    static const std::array<const Strategy*, 2> all{&linear_matrix(), &linear_reference()};
     return all;
   }
 

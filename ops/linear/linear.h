@@ -7,6 +7,7 @@ namespace leadsman::ops {
 
 const Operator& linear_operator();
 
-const Strategy& linear_reference();
+const Strategy& linear_matrix();     ///< "matrix": packed panels, any shape
+const Strategy& linear_reference();  ///< "reference": plain loops in double
 
 }  // namespace leadsman::ops

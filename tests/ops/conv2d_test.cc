@@ -1,0 +1,267 @@
+#include "ops/conv2d/conv2d.h"
+
+#include <array>
+#include <cmath>
+#include <limits>
+
+#include <gtest/gtest.h>
+
+#include "leadsman/error.h"
+#include "tests/support/compare.h"
+#include "tests/support/fast_against_reference.h"
+#include "tests/support/op_runner.h"
+#include "tests/support/random.h"
+#include "tests/support/targets.h"
+
+namespace leadsman::testing {
+namespace {
+
+using Integers = std::vector<std::int64_t>;
+
+struct Geometry {
+  std::int64_t n = 1, c = 1, h = 1, w = 1, out_c = 1;
+  Integers kernel = {1, 1}, stride = {1, 1}, padding = {0, 0, 0, 0}, dilation = {1, 1};
+  std::int64_t groups = 1;
+};
+
+OpCase conv_case(Random& random, const Geometry& g, bool bias) {
+  OpCase c{.op = "conv2d"};
+  c.inputs = {random.tensor({g.n, g.c, g.h, g.w})};
+  c.weights["weight"] = random.tensor({g.out_c, g.c / g.groups, g.kernel[0], g.kernel[1]});
+  if (bias) c.weights["bias"] = random.tensor({g.out_c});
+  c.attributes.set("kernel_size", g.kernel);
+  c.attributes.set("stride", g.stride);
+  c.attributes.set("padding", g.padding);
+  c.attributes.set("dilation", g.dilation);
+  c.attributes.set("groups", g.groups);
+  return c;
+}
+
+std::string describe(const OpCase& c) {
+  std::string text = "input " + c.inputs[0].shape().to_string() + " weight " +
+                     c.weights.at("weight").shape().to_string();
+  for (const auto& [name, value] : c.attributes.values()) {
+    text += " " + name;
+    if (const auto* list = std::get_if<Integers>(&value)) {
+      for (const auto i : *list) text += " " + std::to_string(i);
+    }
+    if (const auto* one = std::get_if<std::int64_t>(&value)) text += " " + std::to_string(*one);
+  }
+  text += " activation " + std::string(ops::activation_name(c.activation.kind));
+  if (c.residual.data() != nullptr) text += " residual";
+  return text;
+}
+
+Geometry random_geometry(Random& random) {
+  constexpr std::array<std::int64_t, 11> kChannels = {1, 2, 3, 4, 5, 16, 17, 31, 33, 48, 64};
+  constexpr std::array<std::int64_t, 6> kKernels = {1, 1, 2, 3, 3, 5};
+  Geometry g;
+  g.n = random.integer(1, 3);
+  g.c = random.pick(kChannels);
+  g.out_c = random.pick(kChannels);
+  g.kernel = {random.pick(kKernels), random.pick(kKernels)};
+  g.stride = {random.integer(1, 3), random.integer(1, 3)};
+  g.dilation = {random.integer(1, 2), random.integer(1, 2)};
+  g.h = random.integer(1, 14) + (g.kernel[0] - 1) * g.dilation[0];
+  g.w = random.integer(1, 14) + (g.kernel[1] - 1) * g.dilation[1];
+  for (auto& side : g.padding) side = random.coin() ? random.integer(0, 3) : 0;
+  return g;
+}
+
+TEST(Conv2dImplicit, AgreesWithTheReferenceOnRandomShapes) {
+  Random random(20);
+  for (int i = 0; i < 120; ++i) {
+    OpCase c = conv_case(random, random_geometry(random), random.coin());
+    add_random_epilogue(random, c);
+    SCOPED_TRACE(describe(c));
+    check_fast_strategy(c, "implicit");
+    if (HasFailure()) return;
+  }
+}
+
+TEST(Conv2dImplicit, AgreesWithTheReferenceInGroups) {
+  Random random(21);
+  for (int i = 0; i < 50; ++i) {
+    Geometry g = random_geometry(random);
+    g.groups = random.integer(2, 5);
+    g.c = g.groups * random.integer(1, 9);
+    g.out_c = g.groups * random.integer(1, 20);
+    OpCase c = conv_case(random, g, random.coin());
+    add_random_epilogue(random, c);
+    SCOPED_TRACE(describe(c));
+    check_fast_strategy(c, "implicit");
+    if (HasFailure()) return;
+  }
+}
+
+// Enough rows and columns for several strips and groups of panels.
+TEST(Conv2dImplicit, AgreesWithTheReferenceOnManyTasks) {
+  Random random(22);
+  for (const Geometry& g :
+       {Geometry{.n = 2,
+       .c = 3,
+       .h = 45,
+       .w = 43,
+       .out_c = 40,
+       .kernel = {7, 7},
+       .stride = {2, 2},
+       .padding = {3, 3, 3, 3}},
+        Geometry{.c = 24, .h = 29, .w = 31, .out_c = 144},
+        Geometry{.c = 40, .h = 23, .w = 23, .out_c = 72, .kernel = {3, 3}, .padding = {1, 1, 1, 1}},
+        Geometry{.c = 3, .h = 64, .w = 64, .out_c = 100, .kernel = {16, 16}, .stride = {16, 16}},
+        Geometry{.c = 200, .h = 7, .w = 7, .out_c = 300}}) {
+    OpCase c = conv_case(random, g, true);
+    add_random_epilogue(random, c);
+    SCOPED_TRACE(describe(c));
+    check_fast_strategy(c, "implicit");
+  }
+}
+
+// Every strategy that takes a case, on every target.
+template <typename Body>
+void on_every_strategy(const OpCase& c, const Body& body) {
+  for (const std::string& strategy : strategy_names("conv2d")) {
+    if (!refusal(c, strategy).empty()) continue;
+    SCOPED_TRACE(strategy);
+    on_every_target([&] { body(strategy); });
+  }
+}
+
+Geometry same_3x3(std::int64_t c, std::int64_t out_c, std::int64_t groups = 1) {
+  return {.c = c,
+          .h = 11,
+          .w = 13,
+          .out_c = out_c,
+          .kernel = {3, 3},
+          .padding = {1, 1, 1, 1},
+          .groups = groups};
+}
+
+TEST(Conv2d, ImpulseReturnsTheFilter) {
+  Random random(23);
+  for (const Geometry& g : {same_3x3(2, 5), same_3x3(20, 18), same_3x3(6, 6, 6)}) {
+    OpCase c = conv_case(random, g, false);
+    const std::int64_t channel = g.groups == 1 ? 1 : 0;
+    Tensor impulse(c.inputs[0].shape());
+    impulse.mutable_data()[(channel * g.h + 5) * g.w + 6] = 1.0F;
+    c.inputs = {impulse};
+    on_every_strategy(c, [&](const std::string& strategy) {
+      const Tensor y = run_op(c, strategy);
+      const Tensor& weight = c.weights["weight"];
+      for (std::int64_t u = 0; u < 3; ++u) {
+        for (std::int64_t v = 0; v < 3; ++v) {
+          // A correlation shows its filter turned by half a turn.
+          EXPECT_EQ(y.data()[(6 - u) * g.w + 7 - v],
+                    weight.data()[(channel % (g.c / g.groups)) * 9 + u * 3 + v]);
+        }
+      }
+      double sum = 0.0;
+      for (std::int64_t i = 0; i < g.h * g.w; ++i) sum += y.data()[i] != 0.0F ? 1.0 : 0.0;
+      EXPECT_LE(sum, 9.0);
+    });
+  }
+}
+
+TEST(Conv2d, IsLinear) {
+  Random random(24);
+  for (const Geometry& g : {same_3x3(17, 33), same_3x3(16, 16, 16), same_3x3(8, 24, 2)}) {
+    OpCase c = conv_case(random, g, false);
+    const Tensor x1 = c.inputs[0];
+    const Tensor x2 = random.tensor(x1.shape());
+    Tensor mixed(x1.shape());
+    for (std::int64_t i = 0; i < mixed.elements(); ++i) {
+      mixed.mutable_data()[i] = 2.0F * x1.data()[i] - 0.5F * x2.data()[i];
+    }
+    on_every_strategy(c, [&](const std::string& strategy) {
+      const auto run = [&](const Tensor& x) {
+        c.inputs = {x};
+        return run_op(c, strategy);
+      };
+      const Tensor y1 = run(x1);
+      const Tensor y2 = run(x2);
+      Tensor expected(y1.shape());
+      for (std::int64_t i = 0; i < expected.elements(); ++i) {
+        expected.mutable_data()[i] = 2.0F * y1.data()[i] - 0.5F * y2.data()[i];
+      }
+      expect_close(run(mixed), expected, op_cost(c).reduction);
+    });
+  }
+}
+
+TEST(Conv2d, ShiftsWithItsInputAwayFromBorders) {
+  Random random(25);
+  for (const Geometry& g : {same_3x3(3, 20), same_3x3(17, 33), same_3x3(16, 16, 16)}) {
+    OpCase c = conv_case(random, g, true);
+    const Tensor x = c.inputs[0];
+    Tensor shifted(x.shape());
+    for (std::int64_t plane = 0; plane < g.c; ++plane) {
+      for (std::int64_t i = 2; i < g.h; ++i) {
+        for (std::int64_t j = 3; j < g.w; ++j) {
+          shifted.mutable_data()[(plane * g.h + i) * g.w + j] =
+              x.data()[(plane * g.h + i - 2) * g.w + j - 3];
+        }
+      }
+    }
+    on_every_strategy(c, [&](const std::string& strategy) {
+      c.inputs = {x};
+      const Tensor y = run_op(c, strategy);
+      c.inputs = {shifted};
+      const Tensor z = run_op(c, strategy);
+      for (std::int64_t plane = 0; plane < g.out_c; ++plane) {
+        for (std::int64_t i = 3; i < g.h - 1; ++i) {
+          for (std::int64_t j = 4; j < g.w - 1; ++j) {
+            // Each value is one sum in one order wherever it stands.
+            ASSERT_EQ(z.data()[(plane * g.h + i) * g.w + j],
+                      y.data()[(plane * g.h + i - 2) * g.w + j - 3]);
+          }
+        }
+      }
+    });
+  }
+}
+
+TEST(Conv2d, NanAndInfinityReachEveryWindowThatSeesThem) {
+  constexpr float kNan = std::numeric_limits<float>::quiet_NaN();
+  Random random(26);
+  for (const Geometry& g : {same_3x3(17, 33), same_3x3(3, 20), same_3x3(16, 16, 16)}) {
+    for (const auto kind : {ops::ActivationKind::kNone, ops::ActivationKind::kRelu,
+                            ops::ActivationKind::kRelu6, ops::ActivationKind::kGelu}) {
+      OpCase c = conv_case(random, g, true);
+      c.activation.kind = kind;
+      c.inputs[0].mutable_data()[5 * g.w + 6] = kNan;
+      on_every_strategy(c, [&](const std::string& strategy) {
+        const Tensor y = run_op(c, strategy);
+        for (std::int64_t i = 0; i < g.h; ++i) {
+          for (std::int64_t j = 0; j < g.w; ++j) {
+            const bool near = std::abs(i - 5) <= 1 && std::abs(j - 6) <= 1;
+            ASSERT_EQ(std::isnan(y.data()[i * g.w + j]), near) << i << ", " << j;
+          }
+        }
+      });
+    }
+  }
+}
+
+TEST(Conv2d, BoxBlurIsTheMeanOfNineNeighbours) {
+  Random random(27);
+  OpCase c{.op = "conv2d", .inputs = {random.tensor({1, 1, 9, 8})}};
+  c.attributes.set("kernel_size", std::int64_t{3});
+  Tensor weight(Shape{1, 1, 3, 3});
+  for (int i = 0; i < 9; ++i) weight.mutable_data()[i] = 1.0F / 9.0F;
+  c.weights["weight"] = weight;
+  Tensor expected(Shape{1, 1, 7, 6});
+  for (std::int64_t i = 0; i < 7; ++i) {
+    for (std::int64_t j = 0; j < 6; ++j) {
+      double sum = 0.0;
+      for (std::int64_t k = 0; k < 9; ++k) {
+        sum += static_cast<double>(c.inputs[0].data()[(i + k / 3) * 8 + j + k % 3]);
+      }
+      expected.mutable_data()[i * 6 + j] = static_cast<float>(sum / 9.0);
+    }
+  }
+  on_every_strategy(
+      c, [&](const std::string& strategy) { expect_close(run_op(c, strategy), expected, 9); });
+}
+
+}  // namespace
+}  // namespace leadsman::testing
