@@ -1,0 +1,37 @@
+// Options that several commands share, and what they stand for.
+#pragma once
+
+#include <string>
+
+#include <CLI/CLI.hpp>
+
+#include "leadsman/bundle.h"
+#include "leadsman/plan.h"
+
+namespace leadsman::cli {
+
+struct ModelOptions {
+  std::string bundle;
+  std::string size;  ///< "HxW", "S" or empty
+  int threads = 0;
+  bool oracle = false;
+
+  void add_to(CLI::App& command);
+  /// {height, width}; {0, 0} when --size was not given. Throws Error(kUsage).
+  std::pair<std::int64_t, std::int64_t> parsed_size() const;
+  PlanOptions plan_options(const Bundle& model) const;
+};
+
+/// What goes into the model: pictures, or a ready tensor.
+/// Picture-to-input conversion at the model's size (the bundle's preprocess, scaled by --size).
+/// Throws Error(kInput) when the bundle has none.
+Preprocess preprocessing(const Bundle& model, const ModelOptions& options);
+
+/// The input of the first graph input: [N, C, H, W] from --tensor, or a picture preprocessed.
+Tensor read_input(const Bundle& model, const ModelOptions& options, const std::string& picture,
+                  const std::string& tensor);
+
+/// "a,b,c" without empty parts.
+std::vector<std::string> split_list(const std::string& text);
+
+}  // namespace leadsman::cli
