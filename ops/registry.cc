@@ -2,8 +2,11 @@
 #include <algorithm>
 #include <array>
 
+#include "ops/activation/activation.h"
 #include "ops/adaptive_avg_pool/adaptive_avg_pool.h"
 #include "ops/add/add.h"
+#include "ops/attention/attention.h"
+#include "ops/attention_weights/attention_weights.h"
 #include "ops/avg_pool/avg_pool.h"
 #include "ops/batch_norm/batch_norm.h"
 #include "ops/class_token/class_token.h"
@@ -12,6 +15,7 @@
 #include "ops/flatten/flatten.h"
 #include "ops/identity/identity.h"
 #include "ops/image_to_tokens/image_to_tokens.h"
+#include "ops/layer_norm/layer_norm.h"
 #include "ops/linear/linear.h"
 #include "ops/max_pool/max_pool.h"
 #include "ops/mean/mean.h"
@@ -25,8 +29,11 @@ namespace leadsman::ops {
 
 std::span<const Operator* const> all_operators() {
   static const std::array all{
+      &activation_operator(),
       &adaptive_avg_pool_operator(),
       &add_operator(),
+      &attention_operator(),
+      &attention_weights_operator(),
       &avg_pool_operator(),
       &batch_norm_operator(),
       &class_token_operator(),
@@ -35,6 +42,7 @@ std::span<const Operator* const> all_operators() {
       &flatten_operator(),
       &identity_operator(),
       &image_to_tokens_operator(),
+      &layer_norm_operator(),
       &linear_operator(),
       &max_pool_operator(),
       &mean_operator(),

@@ -14,6 +14,7 @@
 #include "ops/simd/matrix.h"
 #include "ops/simd/pack.h"
 #include "ops/simd/target.h"
+#include "ops/strategy_of.h"
 
 namespace leadsman::ops {
 namespace {
@@ -182,20 +183,10 @@ class ImplicitKernel final : public Kernel {
   std::vector<simd::PackedMatrix> packed_;  ///< one a group
 };
 
-class Implicit final : public Strategy {
- public:
-  std::string_view name() const override { return "implicit"; }
-  std::string refusal(const OpContext&) const override { return {}; }
-  std::unique_ptr<Kernel> prepare(const OpContext& context,
-                                  const Epilogue& epilogue) const override {
-    return std::make_unique<ImplicitKernel>(context, epilogue);
-  }
-};
-
 }  // namespace
 
 const Strategy& conv2d_implicit() {
-  static const Implicit instance;
+  static const StrategyOf<ImplicitKernel> instance("implicit");
   return instance;
 }
 

@@ -7,6 +7,7 @@
 #include "ops/simd/matrix.h"
 #include "ops/simd/pack.h"
 #include "ops/simd/target.h"
+#include "ops/strategy_of.h"
 
 namespace leadsman::ops {
 namespace {
@@ -58,20 +59,10 @@ class MatrixKernel final : public Kernel {
   simd::PackedMatrix packed_;
 };
 
-class Matrix final : public Strategy {
- public:
-  std::string_view name() const override { return "matrix"; }
-  std::string refusal(const OpContext&) const override { return {}; }
-  std::unique_ptr<Kernel> prepare(const OpContext& context,
-                                  const Epilogue& epilogue) const override {
-    return std::make_unique<MatrixKernel>(context, epilogue);
-  }
-};
-
 }  // namespace
 
 const Strategy& linear_matrix() {
-  static const Matrix instance;
+  static const StrategyOf<MatrixKernel> instance("matrix");
   return instance;
 }
 

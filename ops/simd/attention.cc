@@ -1,0 +1,164 @@
+#include "ops/simd/attention.h"
+
+#include <algorithm>
+#include <cmath>
+#include <limits>
+
+#include "ops/simd/matrix.h"
+#include "ops/simd/pack.h"
+#include "ops/simd/reduce.h"
+
+namespace leadsman::ops::simd {
+namespace {
+
+constexpr std::int64_t kAllKeysAtOnce = 512;
+constexpr std::int64_t kKeyBlock = 256;
+constexpr std::int64_t kScoreFloats = 6144;  // 24 KB, half of a first-level cache or less
+constexpr std::int64_t kMinRows = 12;
+constexpr std::int64_t kMaxRows = 56;
+
+std::int64_t padded(std::int64_t count) {
+  return panel_count(count) * kPanel;
+}
+
+}  // namespace
+
+AttentionPlan::AttentionPlan(std::int64_t queries, std::int64_t keys, std::int64_t d, float scale)
+    : queries_(queries),
+      keys_(keys),
+      d_(d),
+      scale_(scale),
+      key_block_(keys <= kAllKeysAtOnce ? std::max<std::int64_t>(1, keys) : kKeyBlock) {
+  const std::int64_t rows = std::clamp(kScoreFloats / key_block_, kMinRows, kMaxRows);
+  blocks_ = std::max<std::int64_t>(1, (queries + rows - 1) / rows);
+  block_rows_ = (queries + blocks_ - 1) / blocks_;
+}
+
+std::int64_t AttentionPlan::packed_key_floats() const {
+  return padded(keys_) * d_;
+}
+
+std::int64_t AttentionPlan::packed_value_floats() const {
+  return keys_ * padded(d_);
+}
+
+std::int64_t AttentionPlan::scratch_floats() const {
+  // Scaled queries, scores, sums of the output, largest score and sum of each row.
+  return block_rows_ * (padded(d_) + padded(key_block_) + padded(d_) + 2) + kPanel;
+}
+
+std::int64_t AttentionPlan::zero_floats() const {
+  return std::max(padded(keys_), padded(d_));
+}
+
+// Panels of 16 keys, the channels outermost.
+void AttentionPlan::pack_keys(HeadRows keys, float* packed) const {
+  for (std::int64_t first = 0; first < keys_; first += kPanel) {
+    const std::int64_t some = std::min(kPanel, keys_ - first);
+    const float* from = keys.data + first * keys.stride;
+    for (std::int64_t e = 0; e < d_; ++e) {
+      for (std::int64_t i = 0; i < some; ++i) packed[i] = from[i * keys.stride + e];
+      std::fill(packed + some, packed + kPanel, 0.0F);
+      packed += kPanel;
+    }
+  }
+}
+
+// Blocks of keys, in each panels of 16 channels, the keys outermost.
+void AttentionPlan::pack_values(HeadRows values, float* packed) const {
+  for (std::int64_t begin = 0; begin < keys_; begin += key_block_) {
+    const std::int64_t end = std::min(keys_, begin + key_block_);
+    for (std::int64_t first = 0; first < d_; first += kPanel) {
+      const std::int64_t some = std::min(kPanel, d_ - first);
+      for (std::int64_t key = begin; key < end; ++key) {
+        float* rest = std::copy_n(values.data + key * values.stride + first, some, packed);
+        std::fill(rest, packed + kPanel, 0.0F);
+        packed += kPanel;
+      }
+    }
+  }
+}
+
+void AttentionPlan::scale_queries(std::int64_t block, HeadRows queries, float* scaled) const {
+  for (std::int64_t row = first_row(block); row < first_row(block + 1); ++row) {
+    scale_row(queries.data + row * queries.stride, scaled, d_, scale_);
+    scaled += d_;
+  }
+}
+
+void AttentionPlan::attend_block(std::int64_t block, HeadRows queries, const float* packed_keys,
+                                 const float* packed_values, const float* zeros, float* scratch,
+                                 float* out, std::int64_t out_stride) const {
+  const std::int64_t rows = first_row(block + 1) - first_row(block);
+  const std::int64_t score_stride = padded(key_block_);
+  float* scores = scratch;
+  float* scaled = scores + block_rows_ * score_stride;
+  float* sums = scaled + block_rows_ * padded(d_);
+  float* largest = sums + block_rows_ * padded(d_);
+  float* total = largest + block_rows_;
+  scale_queries(block, queries, scaled);
+  std::fill_n(largest, rows, -std::numeric_limits<float>::infinity());
+  std::fill_n(total, rows, 0.0F);
+
+  for (std::int64_t begin = 0; begin < keys_; begin += key_block_) {
+    const std::int64_t count = std::min(key_block_, keys_ - begin);
+    MatrixCall product;
+    product.a = scaled;
+    product.a_stride = d_;
+    product.depth = d_;
+    product.rows = rows;
+    product.panels = packed_keys + begin * d_;
+    product.bias = zeros;
+    product.cols = count;
+    product.c = scores;
+    product.c_stride = score_stride;
+    matrix_product(product);
+
+    for (std::int64_t row = 0; row < rows; ++row) {
+      const float before = largest[row];
+      const float sum = exponentiate_row(scores + row * score_stride, count, largest[row]);
+      if (begin == 0) {
+        total[row] = sum;
+        continue;
+      }
+      const float correction = std::exp(before - largest[row]);
+      total[row] = total[row] * correction + sum;
+      if (correction != 1.0F) scale_row(sums + row * d_, d_, correction);
+    }
+
+    product.a = scores;
+    product.a_stride = score_stride;
+    product.depth = count;
+    product.panels = packed_values + begin * padded(d_);
+    product.cols = d_;
+    product.c = sums;
+    product.c_stride = d_;
+    product.residual = begin == 0 ? nullptr : sums;
+    matrix_product(product);
+  }
+  for (std::int64_t row = 0; row < rows; ++row) {
+    scale_row(sums + row * d_, out + (first_row(block) + row) * out_stride, d_, 1.0F / total[row]);
+  }
+}
+
+void AttentionPlan::weights_block(std::int64_t block, HeadRows queries, const float* packed_keys,
+                                  const float* zeros, float* scratch, float* weights) const {
+  const std::int64_t rows = first_row(block + 1) - first_row(block);
+  scale_queries(block, queries, scratch);
+  MatrixCall product;
+  product.a = scratch;
+  product.a_stride = d_;
+  product.depth = d_;
+  product.rows = rows;
+  product.panels = packed_keys;
+  product.bias = zeros;
+  product.cols = keys_;
+  product.c = weights;
+  product.c_stride = keys_;
+  matrix_product(product);
+  for (std::int64_t row = 0; row < rows; ++row) {
+    softmax_row(weights + row * keys_, weights + row * keys_, keys_);
+  }
+}
+
+}  // namespace leadsman::ops::simd

@@ -1,0 +1,63 @@
+// Scaled dot-product attention of one head: softmax(scale * q k^T) v (Vaswani et al. 2017), in
+// blocks of query rows whose scores stay in the first-level cache. Long sequences go through
+// blocks of keys with an online softmax (Milakov & Gimelshein 2018; Rabe & Staats 2021), so the
+// memory is linear in the number of tokens.
+//
+// Keys and values are packed once a head (`pack`), then blocks of queries may run on any threads.
+// What later has to be added to the scores (a relative position bias, a mask) belongs between the
+// two products, in attend_block().
+#pragma once
+
+#include <cstddef>
+#include <cstdint>
+
+namespace leadsman::ops::simd {
+
+/// Rows of d neighbouring floats, `stride` floats apart.
+struct HeadRows {
+  const float* data = nullptr;
+  std::int64_t stride = 0;
+};
+
+/// Sizes and buffers of one head.
+class AttentionPlan {
+ public:
+  AttentionPlan(std::int64_t queries, std::int64_t keys, std::int64_t d, float scale);
+
+  /// Query blocks; how many there are does not depend on threads. Block b begins with query
+  /// first_row(b) and holds at most block_rows() of them.
+  std::int64_t blocks() const { return blocks_; }
+  std::int64_t block_rows() const { return block_rows_; }
+  std::int64_t first_row(std::int64_t block) const { return block * queries_ / blocks_; }
+  /// Floats of one head's packed keys (and values), and of one worker's scratch.
+  std::int64_t packed_key_floats() const;
+  std::int64_t packed_value_floats() const;
+  std::int64_t scratch_floats() const;
+  /// As many zeros as attend_block() and weights_block() need.
+  std::int64_t zero_floats() const;
+
+  void pack_keys(HeadRows keys, float* packed) const;
+  void pack_values(HeadRows values, float* packed) const;
+
+  /// Rows of query block `block` of the attention's output, at out + row * out_stride.
+  void attend_block(std::int64_t block, HeadRows queries, const float* packed_keys,
+                    const float* packed_values, const float* zeros, float* scratch, float* out,
+                    std::int64_t out_stride) const;
+
+  /// Rows of query block `block` of softmax(scale * q k^T), `keys` floats a row, side by side.
+  void weights_block(std::int64_t block, HeadRows queries, const float* packed_keys,
+                     const float* zeros, float* scratch, float* weights) const;
+
+ private:
+  void scale_queries(std::int64_t block, HeadRows queries, float* scaled) const;
+
+  std::int64_t queries_;
+  std::int64_t keys_;
+  std::int64_t d_;
+  float scale_;
+  std::int64_t key_block_;   ///< a multiple of a panel, or all keys
+  std::int64_t block_rows_;  ///< the most rows of a block
+  std::int64_t blocks_;
+};
+
+}  // namespace leadsman::ops::simd
