@@ -42,6 +42,11 @@ class ReferenceKernel final : public Kernel {
   std::int64_t rows_in_image_;
 };
 
+// Whether `factors` holds one value for each channel of `image`.
+bool is_factor_of(const Shape& image, const Shape& factors) {
+  return image.rank() == 4 && factors == Shape{image[0], image[1], 1, 1};
+}
+
 class Mul final : public Operator {
  public:
   const Contract& contract() const override {
@@ -61,10 +66,14 @@ class Mul final : public Operator {
   Shape output_shape(const OpContext& context) const override {
     const Shape& a = context.inputs[0];
     const Shape& b = context.inputs[1];
-    if (a == b || (a.rank() == 4 && b == Shape{a[0], a[1], 1, 1})) return a;
-    std::string expected = a.to_string();
-    if (a.rank() == 4) expected += " or " + Shape{a[0], a[1], 1, 1}.to_string();
-    throw_input("input 2 has shape " + b.to_string() + ", expected " + expected);
+    if (a == b || is_factor_of(a, b)) return a;
+    std::string message = "input 2 has shape " + b.to_string() + ", expected " + a.to_string();
+    if (is_factor_of(b, a)) {
+      message += "; the larger input comes first";
+    } else if (a.rank() == 4) {
+      message += " or " + Shape{a[0], a[1], 1, 1}.to_string();
+    }
+    throw_input(message);
   }
 
   Cost cost(const OpContext& /*context*/) const override { return {}; }

@@ -43,10 +43,9 @@ Grids read_grids(const OpContext& context) {
   g.stored_h = square ? root : g.h;
   g.stored_w = square ? root : g.w;
   if (Shape{g.stored_h, g.stored_w}.elements() != stored - g.prefix || stored == g.prefix) {
-    throw_input("weight has " + std::to_string(stored) + " positions: without " +
-                std::to_string(g.prefix) +
-                " prefix tokens no square grid, so it cannot be fitted to " + std::to_string(g.h) +
-                " x " + std::to_string(g.w));
+    throw_input("weight has " + std::to_string(stored) + " positions: the " +
+                std::to_string(stored - g.prefix) + " behind prefix_tokens form no square grid, " +
+                "so they cannot be fitted to " + std::to_string(g.h) + " x " + std::to_string(g.w));
   }
   return g;
 }
