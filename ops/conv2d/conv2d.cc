@@ -65,7 +65,8 @@ class Conv2d final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    static const std::array<const Strategy*, 2> all{&conv2d_implicit(), &conv2d_reference()};
+    static const std::array<const Strategy*, 3> all{&conv2d_depthwise(), &conv2d_implicit(),
+                                                    &conv2d_reference()};
     return all;
   }
 

@@ -30,6 +30,7 @@ struct Conv2dGeometry {
 
 const Operator& conv2d_operator();
 
+const Strategy& conv2d_depthwise();  ///< "depthwise": one input channel a group
 const Strategy& conv2d_implicit();   ///< "implicit": a matrix product, any shape
 const Strategy& conv2d_reference();  ///< "reference": plain loops in double
 

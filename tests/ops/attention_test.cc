@@ -255,7 +255,7 @@ TEST(Attention, NineHeadsExpressAConvolution) {
   }
 
   on_every_target([&] {
-    const Tensor expected = run_op(conv, strategy_names("conv2d")[1]);
+    const Tensor expected = run_op(conv, "implicit");
     OpCase project{.op = "linear", .inputs = {run_op(attention, "blocked")}};
     project.weights["weight"] = projection;
     const Tensor y = run_op(project, "matrix");

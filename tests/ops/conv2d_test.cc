@@ -3,6 +3,7 @@
 #include <array>
 #include <cmath>
 #include <limits>
+#include <sstream>
 
 #include <gtest/gtest.h>
 
@@ -38,18 +39,19 @@ OpCase conv_case(Random& random, const Geometry& g, bool bias) {
 }
 
 std::string describe(const OpCase& c) {
-  std::string text = "input " + c.inputs[0].shape().to_string() + " weight " +
-                     c.weights.at("weight").shape().to_string();
+  std::ostringstream text;
+  text << "input " << c.inputs[0].shape().to_string() << " weight "
+       << c.weights.at("weight").shape().to_string();
   for (const auto& [name, value] : c.attributes.values()) {
-    text += " " + name;
+    text << ' ' << name;
     if (const auto* list = std::get_if<Integers>(&value)) {
-      for (const auto i : *list) text += " " + std::to_string(i);
+      for (const auto i : *list) text << ' ' << i;
     }
-    if (const auto* one = std::get_if<std::int64_t>(&value)) text += " " + std::to_string(*one);
+    if (const auto* one = std::get_if<std::int64_t>(&value)) text << ' ' << *one;
   }
-  text += " activation " + std::string(ops::activation_name(c.activation.kind));
-  if (c.residual.data() != nullptr) text += " residual";
-  return text;
+  text << " activation " << ops::activation_name(c.activation.kind);
+  if (c.residual.data() != nullptr) text << " residual";
+  return text.str();
 }
 
 Geometry random_geometry(Random& random) {
@@ -115,6 +117,59 @@ TEST(Conv2dImplicit, AgreesWithTheReferenceOnManyTasks) {
     SCOPED_TRACE(describe(c));
     check_fast_strategy(c, "implicit");
   }
+}
+
+TEST(Conv2dDepthwise, AgreesWithTheReferenceOnRandomShapes) {
+  constexpr std::array<std::int64_t, 11> kChannels = {2, 3, 5, 8, 15, 16, 17, 31, 33, 64, 100};
+  constexpr std::array<std::int64_t, 5> kKernels = {1, 2, 3, 5, 7};
+  Random random(28);
+  for (int i = 0; i < 120; ++i) {
+    Geometry g = random_geometry(random);
+    g.c = random.pick(kChannels);
+    g.groups = g.c;
+    g.out_c = g.c * (random.coin() ? 1 : random.integer(2, 3));
+    g.kernel = {random.pick(kKernels), random.pick(kKernels)};
+    if (random.coin()) g.dilation = {1, 1};
+    g.h = random.integer(1, 9) + (g.kernel[0] - 1) * g.dilation[0];
+    g.w = random.integer(1, 31) + (g.kernel[1] - 1) * g.dilation[1];
+    OpCase c = conv_case(random, g, random.coin());
+    add_random_epilogue(random, c);
+    SCOPED_TRACE(describe(c));
+    check_fast_strategy(c, "depthwise");
+    if (HasFailure()) return;
+  }
+}
+
+// The shapes that published networks use most.
+TEST(Conv2dDepthwise, AgreesWithTheReferenceOnUsualShapes) {
+  Random random(29);
+  for (const std::int64_t size : {3, 7, 14, 20}) {
+    for (const auto& [kernel, stride] :
+         {std::pair<std::int64_t, std::int64_t>{3, 1}, {3, 2}, {5, 1}, {5, 2}, {7, 1}}) {
+      for (const std::int64_t channels : {16, 40, 256}) {
+        const std::int64_t pad = kernel / 2;
+        const Geometry g{.c = channels,
+                         .h = size,
+                         .w = size,
+                         .out_c = channels,
+                         .kernel = {kernel, kernel},
+                         .stride = {stride, stride},
+                         .padding = {pad, pad, pad, pad},
+                         .groups = channels};
+        OpCase c = conv_case(random, g, true);
+        add_random_epilogue(random, c);
+        SCOPED_TRACE(describe(c));
+        check_fast_strategy(c, "depthwise");
+      }
+    }
+  }
+}
+
+TEST(Conv2dDepthwise, RefusesWhatIsNotDepthwise) {
+  Random random(30);
+  EXPECT_NE(refusal(conv_case(random, {.c = 4, .out_c = 4, .groups = 2}, false), "depthwise"), "");
+  EXPECT_NE(refusal(conv_case(random, {.c = 1, .out_c = 4}, false), "depthwise"), "");
+  EXPECT_EQ(refusal(conv_case(random, {.c = 4, .out_c = 8, .groups = 4}, false), "depthwise"), "");
 }
 
 // Every strategy that takes a case, on every target.
