@@ -24,8 +24,8 @@ class BatchNorm final : public Operator {
                         .choices = {}}},
         .weights = {{"weight", false, "[C], factor; 1 when absent"},
                     {"bias", false, "[C], summand; 0 when absent"},
-                    {"mean", true, "[C]"},
-                    {"variance", true, "[C]"}},
+                    {"mean", true, "[C], running mean", false},
+                    {"variance", true, "[C], running variance", false}},
     };
     return contract;
   }
