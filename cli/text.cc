@@ -85,9 +85,8 @@ std::string shape_text(const std::vector<std::int64_t>& sizes) {
 
 std::string shortened(const std::string& text, std::size_t width) {
   if (text.size() <= width) return text;
-  if (width < 4) return text.substr(0, width);
-  const std::size_t head = (width - 2) / 2;
-  return text.substr(0, head) + ".." + text.substr(text.size() - (width - 2 - head));
+  if (width < 4) return text.substr(text.size() - width);
+  return ".." + text.substr(text.size() - (width - 2));
 }
 
 std::vector<std::size_t> Table::widths() const {

@@ -26,7 +26,7 @@ std::string bytes_text(double bytes);
 std::string shape_text(const std::vector<std::int64_t>& sizes);
 /// printf("%.*g") with `digits` significant digits.
 std::string digits(double value, int digits);
-/// `text` cut in its middle to `width` characters.
+/// The end of `text`, which tells layers and files apart, in `width` characters.
 std::string shortened(const std::string& text, std::size_t width);
 
 /// Columns of text, right- or left-aligned. One column may give way when the terminal is narrow.
