@@ -1,6 +1,6 @@
 // Elementary functions and activations on one vector; part of every target's code.
 //
-// NaN goes in, NaN comes out. Errors are those that tests/ops/simd_math_test.cc measures against
+// NaN goes in, NaN comes out. Errors are those that tests/ops/activation_test.cc measures against
 // double precision, with and without fused multiply-add.
 #if defined(LEADSMAN_OPS_SIMD_MATH_INL_H_) == defined(HWY_TARGET_TOGGLE)
 #ifdef LEADSMAN_OPS_SIMD_MATH_INL_H_

@@ -2,12 +2,14 @@
 
 #include <array>
 #include <cmath>
+#include <iterator>
 #include <limits>
 #include <sstream>
 
 #include <gtest/gtest.h>
 
 #include "leadsman/error.h"
+#include "tests/ops/tables.h"
 #include "tests/support/compare.h"
 #include "tests/support/fast_against_reference.h"
 #include "tests/support/op_runner.h"
@@ -295,6 +297,17 @@ TEST(Conv2d, NanAndInfinityReachEveryWindowThatSeesThem) {
       });
     }
   }
+}
+
+TEST(Conv2d, AgreesWithATableByScipy) {
+  const Tensor x({2, 3, 6, 7}, {std::begin(kCorrelationImage), std::end(kCorrelationImage)});
+  OpCase c{.op = "conv2d", .inputs = {x}};
+  c.attributes.set("kernel_size", Integers{3, 2});
+  c.weights["weight"] =
+      Tensor({4, 3, 3, 2}, {std::begin(kCorrelationWeight), std::end(kCorrelationWeight)});
+  const Tensor expected({2, 4, 4, 6}, {std::begin(kCorrelation), std::end(kCorrelation)});
+  on_every_strategy(
+      c, [&](const std::string& strategy) { expect_same_bits(run_op(c, strategy), expected); });
 }
 
 TEST(Conv2d, BoxBlurIsTheMeanOfNineNeighbours) {
