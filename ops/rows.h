@@ -5,7 +5,6 @@
 #include <cstdint>
 
 #include "core/threads.h"
-#include "ops/epilogue.h"
 
 namespace leadsman::ops {
 
@@ -20,9 +19,5 @@ void parallel_rows(int threads, std::int64_t rows, std::int64_t channels, const 
     body(task * block, std::min((task + 1) * block, rows));
   });
 }
-
-/// Applies the activation to `count` values where they lie. The piecewise linear kinds are vector
-/// code; the others are computed one by one in double, as activate() does.
-void activate_row(Activation activation, float* values, std::int64_t count);
 
 }  // namespace leadsman::ops

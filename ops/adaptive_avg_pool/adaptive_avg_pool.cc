@@ -1,9 +1,14 @@
 #include "ops/adaptive_avg_pool/adaptive_avg_pool.h"
 
+#include <algorithm>
+#include <array>
+
 #include "core/threads.h"
 #include "leadsman/error.h"
+#include "ops/pixel_grid.h"
+#include "ops/simd/pixel_grid.h"
+#include "ops/simd/target.h"
 #include "ops/strategy_of.h"
-#include "ops/window_mean.h"
 
 namespace leadsman::ops {
 namespace {
@@ -18,35 +23,56 @@ std::int64_t longest_window(std::int64_t in, std::int64_t out) {
   return std::min(in, in % out == 0 ? in / out : in / out + 2);
 }
 
-class ReferenceKernel final : public Kernel {
+class AdaptiveAvgPoolKernel : public Kernel {
  public:
-  explicit ReferenceKernel(const OpContext& context)
-      : in_(context.inputs[0]), out_(context.output) {}
+  AdaptiveAvgPoolKernel(const OpContext& context, MeanOfPixels mean)
+      : in_(context.inputs[0]), out_(context.output), mean_(mean) {}
 
   // Tasks are an output row and a block of channels: the usual output has one row.
   void run(const KernelCall& call) const override {
-    const std::int64_t channels = in_[1];
-    const std::int64_t blocks = (channels + kMeanChannels - 1) / kMeanChannels;
+    constexpr std::int64_t kBlock = 64;
+    const std::int64_t blocks = (in_[1] + kBlock - 1) / kBlock;
     parallel_for(call.threads, out_[0] * out_[2] * blocks, [&](std::int64_t task, int) {
       const std::int64_t row = task / blocks;
-      const std::int64_t n = row / out_[2];
-      const std::int64_t i = row % out_[2];
-      const ImageMemory image{call.inputs[0].data + n * in_[2] * in_[3] * channels, in_[3],
-                              channels};
-      float* out = call.output.data + row * out_[3] * channels;
-      Rectangle r{window_begin(i, in_[2], out_[2]), 0, window_end(i, in_[2], out_[2]), 0};
-      for (std::int64_t j = 0; j < out_[3]; ++j) {
-        r.left = window_begin(j, in_[3], out_[3]);
-        r.right = window_end(j, in_[3], out_[3]);
-        const auto divisor = static_cast<double>((r.bottom - r.top) * (r.right - r.left));
-        rectangle_mean(image, r, task % blocks * kMeanChannels, divisor, out + j * channels);
-      }
+      const std::int64_t c = task % blocks * kBlock;
+      row_means(call.inputs[0].data + row / out_[2] * in_[2] * in_[3] * in_[1] + c, row % out_[2],
+                std::min(kBlock, in_[1] - c), call.output.data + row * out_[3] * in_[1] + c);
     });
   }
 
  private:
+  void row_means(const float* image, std::int64_t i, std::int64_t channels, float* out) const {
+    const std::int64_t top = window_begin(i, in_[2], out_[2]);
+    const std::int64_t rows = window_end(i, in_[2], out_[2]) - top;
+    for (std::int64_t j = 0; j < out_[3]; ++j) {
+      const std::int64_t left = window_begin(j, in_[3], out_[3]);
+      const std::int64_t columns = window_end(j, in_[3], out_[3]) - left;
+      mean_({.first = image + (top * in_[3] + left) * in_[1],
+             .rows = rows,
+             .columns = columns,
+             .row_stride = in_[3] * in_[1],
+             .column_stride = in_[1]},
+            channels, static_cast<double>(rows * columns), out + j * in_[1]);
+    }
+  }
+
   Shape in_;
   Shape out_;
+  MeanOfPixels mean_;
+};
+
+class RowsKernel final : public AdaptiveAvgPoolKernel {
+ public:
+  explicit RowsKernel(const OpContext& context)
+      : AdaptiveAvgPoolKernel(context, simd::mean_of_pixels) {
+    simd::choose_target();
+  }
+};
+
+class ReferenceKernel final : public AdaptiveAvgPoolKernel {
+ public:
+  explicit ReferenceKernel(const OpContext& context)
+      : AdaptiveAvgPoolKernel(context, ops::mean_of_pixels) {}
 };
 
 class AdaptiveAvgPool final : public Operator {
@@ -88,7 +114,10 @@ class AdaptiveAvgPool final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    return only_reference<ReferenceKernel>();
+    static const StrategyOf<RowsKernel> rows("rows");
+    static const StrategyOf<ReferenceKernel> reference("reference");
+    static const std::array<const Strategy*, 2> all{&rows, &reference};
+    return all;
   }
 };
 

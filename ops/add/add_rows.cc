@@ -1,6 +1,8 @@
 // In float, then the activation while the block is still in the first-level cache.
 #include "ops/add/add.h"
 #include "ops/rows.h"
+#include "ops/simd/activation.h"
+#include "ops/simd/target.h"
 #include "ops/strategy_of.h"
 
 namespace leadsman::ops {
@@ -9,7 +11,9 @@ namespace {
 class RowsKernel final : public Kernel {
  public:
   RowsKernel(const OpContext& context, const Epilogue& epilogue)
-      : elements_(context.output.elements()), epilogue_(epilogue) {}
+      : elements_(context.output.elements()), epilogue_(epilogue) {
+    simd::choose_target();
+  }
 
   bool runs_in_place() const override { return true; }
 
@@ -24,7 +28,8 @@ class RowsKernel final : public Kernel {
       } else {
         for (std::int64_t i = begin; i < end; ++i) y[i] = a[i] + b[i];
       }
-      activate_row(epilogue_.activation, y + begin, end - begin);
+      if (epilogue_.activation.kind == ActivationKind::kNone) return;
+      simd::activate_row(epilogue_.activation, y + begin, y + begin, end - begin);
     });
   }
 

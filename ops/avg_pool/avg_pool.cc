@@ -1,9 +1,14 @@
 #include "ops/avg_pool/avg_pool.h"
 
+#include <algorithm>
+#include <array>
+
 #include "core/threads.h"
+#include "ops/pixel_grid.h"
+#include "ops/simd/pixel_grid.h"
+#include "ops/simd/target.h"
 #include "ops/strategy_of.h"
 #include "ops/window.h"
-#include "ops/window_mean.h"
 
 namespace leadsman::ops {
 namespace {
@@ -20,27 +25,29 @@ struct Extent {
                               : end - begin) {}
 };
 
-class ReferenceKernel final : public Kernel {
+class AvgPoolKernel : public Kernel {
  public:
-  explicit ReferenceKernel(const OpContext& context)
+  AvgPoolKernel(const OpContext& context, MeanOfPixels mean)
       : window_(context.attributes),
         count_padding_(context.attributes.flag("count_padding")),
         in_(context.inputs[0]),
-        out_(context.output) {}
+        out_(context.output),
+        mean_(mean) {}
 
   void run(const KernelCall& call) const override {
     const std::int64_t channels = in_[1];
     parallel_for(call.threads, out_[0] * out_[2], [&](std::int64_t row, int) {
-      const ImageMemory image{call.inputs[0].data + row / out_[2] * in_[2] * in_[3] * channels,
-                              in_[3], channels};
-      float* out = call.output.data + row * out_[3] * channels;
+      const float* image = call.inputs[0].data + row / out_[2] * in_[2] * in_[3] * channels;
       const Extent y = extent(0, row % out_[2]);
       for (std::int64_t j = 0; j < out_[3]; ++j) {
         const Extent x = extent(1, j);
-        const auto divisor = static_cast<double>(y.counted * x.counted);
-        for (std::int64_t c = 0; c < channels; c += kMeanChannels) {
-          rectangle_mean(image, {y.begin, x.begin, y.end, x.end}, c, divisor, out + j * channels);
-        }
+        mean_({.first = image + (y.begin * in_[3] + x.begin) * channels,
+               .rows = y.end - y.begin,
+               .columns = x.end - x.begin,
+               .row_stride = in_[3] * channels,
+               .column_stride = channels},
+              channels, static_cast<double>(y.counted * x.counted),
+              call.output.data + (row * out_[3] + j) * channels);
       }
     });
   }
@@ -55,6 +62,20 @@ class ReferenceKernel final : public Kernel {
   bool count_padding_;
   Shape in_;
   Shape out_;
+  MeanOfPixels mean_;
+};
+
+class RowsKernel final : public AvgPoolKernel {
+ public:
+  explicit RowsKernel(const OpContext& context) : AvgPoolKernel(context, simd::mean_of_pixels) {
+    simd::choose_target();
+  }
+};
+
+class ReferenceKernel final : public AvgPoolKernel {
+ public:
+  explicit ReferenceKernel(const OpContext& context)
+      : AvgPoolKernel(context, ops::mean_of_pixels) {}
 };
 
 class AvgPool final : public Operator {
@@ -99,7 +120,10 @@ class AvgPool final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    return only_reference<ReferenceKernel>();
+    static const StrategyOf<RowsKernel> rows("rows");
+    static const StrategyOf<ReferenceKernel> reference("reference");
+    static const std::array<const Strategy*, 2> all{&rows, &reference};
+    return all;
   }
 };
 

@@ -4,6 +4,8 @@
 
 #include "ops/batch_norm/batch_norm.h"
 #include "ops/rows.h"
+#include "ops/simd/activation.h"
+#include "ops/simd/target.h"
 #include "ops/strategy_of.h"
 
 namespace leadsman::ops {
@@ -18,6 +20,7 @@ class RowsKernel final : public Kernel {
         scale_(Shape{channels_}),
         bias_(context.weight("bias") ? *context.weight("bias") : Tensor(Shape{channels_})),
         epilogue_(epilogue) {
+    simd::choose_target();
     const Tensor* weight = context.weight("weight");
     const Tensor& variance = *context.weight("variance");
     const double eps = context.attributes.number("eps");
@@ -45,8 +48,9 @@ class RowsKernel final : public Kernel {
           normalise(x, y);
         }
       }
-      activate_row(epilogue_.activation, call.output.data + begin * channels_,
-                   (end - begin) * channels_);
+      if (epilogue_.activation.kind == ActivationKind::kNone) return;
+      float* block = call.output.data + begin * channels_;
+      simd::activate_row(epilogue_.activation, block, block, (end - begin) * channels_);
     });
   }
 

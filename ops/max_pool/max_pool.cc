@@ -1,72 +1,75 @@
 #include "ops/max_pool/max_pool.h"
 
 #include <algorithm>
-#include <limits>
+#include <array>
 
 #include "core/threads.h"
+#include "ops/pixel_grid.h"
+#include "ops/simd/pixel_grid.h"
+#include "ops/simd/target.h"
 #include "ops/strategy_of.h"
 #include "ops/window.h"
 
 namespace leadsman::ops {
 namespace {
 
-// Taps of one window that lie inside the image, on one axis: begin, begin + dilation, ... < end.
+// Taps of one window that lie inside the image, on one axis.
 struct Taps {
-  std::int64_t begin, end;
+  std::int64_t first, count;
 
-  Taps(std::int64_t start, std::int64_t kernel, std::int64_t dilation, std::int64_t size)
-      : begin(start), end(std::min(start + (kernel - 1) * dilation + 1, size)) {
-    if (begin < 0) begin += (dilation - 1 - begin) / dilation * dilation;
+  Taps(std::int64_t start, std::int64_t kernel, std::int64_t dilation, std::int64_t size) {
+    const std::int64_t skipped = start < 0 ? (dilation - 1 - start) / dilation : 0;
+    first = start + skipped * dilation;
+    const std::int64_t below_size = first < size ? (size - 1 - first) / dilation + 1 : 0;
+    count = std::max<std::int64_t>(0, std::min(kernel - skipped, below_size));
+    if (count == 0) first = 0;
   }
 };
 
-// A maximum is exact, so that this plain form is the fast one too: channels innermost.
-class ReferenceKernel final : public Kernel {
+class MaxPoolKernel : public Kernel {
  public:
-  explicit ReferenceKernel(const OpContext& context)
-      : window_(context.attributes), in_(context.inputs[0]), out_(context.output) {}
+  MaxPoolKernel(const OpContext& context, MaxOfPixels max)
+      : window_(context.attributes), in_(context.inputs[0]), out_(context.output), max_(max) {}
 
   void run(const KernelCall& call) const override {
     const std::int64_t channels = in_[1];
     parallel_for(call.threads, out_[0] * out_[2], [&](std::int64_t row, int) {
       const float* image = call.inputs[0].data + row / out_[2] * in_[2] * in_[3] * channels;
-      float* out = call.output.data + row * out_[3] * channels;
-      const Taps rows(row % out_[2] * window_.stride[0] - window_.padding[0], window_.kernel[0],
-                      window_.dilation[0], in_[2]);
+      const Taps y = taps(0, row % out_[2]);
       for (std::int64_t j = 0; j < out_[3]; ++j) {
-        const Taps columns(j * window_.stride[1] - window_.padding[1], window_.kernel[1],
-                           window_.dilation[1], in_[3]);
-        for (std::int64_t c = 0; c < channels; c += kBlock) {
-          window_max(image, rows, columns, c, out + j * channels);
-        }
+        const Taps x = taps(1, j);
+        max_({.first = image + (y.first * in_[3] + x.first) * channels,
+              .rows = y.count,
+              .columns = x.count,
+              .row_stride = window_.dilation[0] * in_[3] * channels,
+              .column_stride = window_.dilation[1] * channels},
+             channels, call.output.data + (row * out_[3] + j) * channels);
       }
     });
   }
 
  private:
-  static constexpr std::int64_t kBlock = 64;
-
-  void window_max(const float* image, const Taps& rows, const Taps& columns, std::int64_t first,
-                  float* out) const {
-    const std::int64_t count = std::min(kBlock, in_[1] - first);
-    float largest[kBlock];
-    std::fill_n(largest, kBlock, -std::numeric_limits<float>::infinity());
-    for (std::int64_t y = rows.begin; y < rows.end; y += window_.dilation[0]) {
-      for (std::int64_t x = columns.begin; x < columns.end; x += window_.dilation[1]) {
-        const float* pixel = image + (y * in_[3] + x) * in_[1] + first;
-        for (std::int64_t c = 0; c < count; ++c) {
-          // True for a NaN in `pixel`, false once `largest` holds one.
-          const bool wins = !(pixel[c] <= largest[c]) && largest[c] == largest[c];
-          largest[c] = wins ? pixel[c] : largest[c];
-        }
-      }
-    }
-    std::copy_n(largest, count, out + first);
+  Taps taps(std::size_t axis, std::int64_t index) const {
+    return {index * window_.stride[axis] - window_.padding[axis], window_.kernel[axis],
+            window_.dilation[axis], in_[static_cast<int>(axis) + 2]};
   }
 
   WindowAttributes window_;
   Shape in_;
   Shape out_;
+  MaxOfPixels max_;
+};
+
+class RowsKernel final : public MaxPoolKernel {
+ public:
+  explicit RowsKernel(const OpContext& context) : MaxPoolKernel(context, simd::max_of_pixels) {
+    simd::choose_target();
+  }
+};
+
+class ReferenceKernel final : public MaxPoolKernel {
+ public:
+  explicit ReferenceKernel(const OpContext& context) : MaxPoolKernel(context, ops::max_of_pixels) {}
 };
 
 class MaxPool final : public Operator {
@@ -104,7 +107,10 @@ class MaxPool final : public Operator {
   Cost cost(const OpContext& /*context*/) const override { return {}; }
 
   std::span<const Strategy* const> strategies() const override {
-    return only_reference<ReferenceKernel>();
+    static const StrategyOf<RowsKernel> rows("rows");
+    static const StrategyOf<ReferenceKernel> reference("reference");
+    static const std::array<const Strategy*, 2> all{&rows, &reference};
+    return all;
   }
 };
 

@@ -1,9 +1,14 @@
 #include "ops/mean/mean.h"
 
+#include <algorithm>
+#include <array>
+
 #include "core/threads.h"
 #include "leadsman/error.h"
+#include "ops/pixel_grid.h"
+#include "ops/simd/pixel_grid.h"
+#include "ops/simd/target.h"
 #include "ops/strategy_of.h"
-#include "ops/window_mean.h"
 
 namespace leadsman::ops {
 namespace {
@@ -12,20 +17,27 @@ std::int64_t positions_in_item(const Shape& input) {
   return input.rank() == 4 ? input[2] * input[3] : input[1];
 }
 
-class ReferenceKernel final : public Kernel {
+class MeanKernel : public Kernel {
  public:
-  explicit ReferenceKernel(const OpContext& context)
+  MeanKernel(const OpContext& context, MeanOfPixels mean)
       : items_(context.inputs[0][0]),
         positions_(positions_in_item(context.inputs[0])),
-        channels_(channel_count(context.inputs[0])) {}
+        channels_(channel_count(context.inputs[0])),
+        mean_(mean) {}
 
   void run(const KernelCall& call) const override {
-    const std::int64_t blocks = (channels_ + kMeanChannels - 1) / kMeanChannels;
+    constexpr std::int64_t kBlock = 64;  // channels of a task
+    const std::int64_t blocks = (channels_ + kBlock - 1) / kBlock;
     parallel_for(call.threads, items_ * blocks, [&](std::int64_t task, int) {
       const std::int64_t n = task / blocks;
-      const ImageMemory column{call.inputs[0].data + n * positions_ * channels_, 1, channels_};
-      rectangle_mean(column, {0, 0, positions_, 1}, task % blocks * kMeanChannels,
-                     static_cast<double>(positions_), call.output.data + n * channels_);
+      const std::int64_t c = task % blocks * kBlock;
+      mean_({.first = call.inputs[0].data + n * positions_ * channels_ + c,
+             .rows = 1,
+             .columns = positions_,
+             .row_stride = 0,
+             .column_stride = channels_},
+            std::min(kBlock, channels_ - c), static_cast<double>(positions_),
+            call.output.data + n * channels_ + c);
     });
   }
 
@@ -33,6 +45,19 @@ class ReferenceKernel final : public Kernel {
   std::int64_t items_;
   std::int64_t positions_;
   std::int64_t channels_;
+  MeanOfPixels mean_;
+};
+
+class RowsKernel final : public MeanKernel {
+ public:
+  explicit RowsKernel(const OpContext& context) : MeanKernel(context, simd::mean_of_pixels) {
+    simd::choose_target();
+  }
+};
+
+class ReferenceKernel final : public MeanKernel {
+ public:
+  explicit ReferenceKernel(const OpContext& context) : MeanKernel(context, ops::mean_of_pixels) {}
 };
 
 class Mean final : public Operator {
@@ -70,7 +95,10 @@ class Mean final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    return only_reference<ReferenceKernel>();
+    static const StrategyOf<RowsKernel> rows("rows");
+    static const StrategyOf<ReferenceKernel> reference("reference");
+    static const std::array<const Strategy*, 2> all{&rows, &reference};
+    return all;
   }
 };
 
