@@ -1,3 +1,4 @@
+# shellcheck shell=sh disable=SC2034  # sourced
 # For the scripts of this project: `. cmake/needs.sh`, then `need_packages NAME...`.
 
 # Installs the Debian packages that are missing, as root or through sudo when it asks for no

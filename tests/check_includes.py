@@ -42,7 +42,7 @@ ROOM_OF_HEADER = {name: room for room, names in HEADERS.items() for name in name
 # Libraries of others: what the include begins with, and where alone it may stand.
 LIBRARIES = {
     "omp.h": ["core/threads.cc"],
-    "hwy/": ["ops/simd/", "tests/ops/simd/"],
+    "hwy/": ["ops/simd/", "tests/ops/simd/", "bench/"],
     "CLI/": ["cli/"],
     "nlohmann/": ["loaders/", "observe/", "cli/", "examples/", "tests/", "bench/"],
     "stb/": ["loaders/"],
