@@ -1,6 +1,6 @@
 // Depthwise convolution: each channel has filters of its own, one or a few ("multiplier"). Vectors
 // run along the channels, tiles along the output row. With a multiplier above one, each filter of
-// all channels is computed in turn into a tile of scratch, from which the outputs, whose channels
+// all channels is computed in turn into a row of scratch, from which the outputs, whose channels
 // are interleaved, are put together.
 #include <algorithm>
 #include <limits>
@@ -49,7 +49,6 @@ class DepthwiseKernel final : public Kernel {
   std::size_t packed_bytes() const override { return weights_.bytes() + bias_.bytes(); }
 
   void run(const KernelCall& call) const override {
-    const simd::DepthwiseTiling tiling(g_.out_w, chunk_, g_.kernel_w, g_.stride_w, g_.dilation_w);
     const std::int64_t rows = g_.n * g_.out_h;
     const std::int64_t chunks = (g_.c + chunk_ - 1) / chunk_;
     const std::int64_t strips = (rows + task_rows_ - 1) / task_rows_;
@@ -57,23 +56,17 @@ class DepthwiseKernel final : public Kernel {
       const std::int64_t first = task / chunks * task_rows_;
       const std::int64_t end = std::min(rows, first + task_rows_);
       for (std::int64_t row = first; row < end; ++row) {
-        for (std::int64_t j = 0; j < g_.out_w; j += tiling.pixels()) {
-          run_tile(call, tiling, row, j, task % chunks * chunk_, worker);
-        }
+        run_row(call, row, task % chunks * chunk_, worker);
       }
     });
   }
 
  private:
   std::size_t pointer_bytes() const {
-    return simd::aligned_bytes(
-        static_cast<std::size_t>(g_.kernel_h *
-                                 simd::DepthwiseTiling::max_columns(g_.kernel_w, g_.stride_w)) *
-        sizeof(const float*));
+    return simd::aligned_bytes(static_cast<std::size_t>(g_.kernel_h) * sizeof(const float*));
   }
   std::size_t worker_bytes() const {
-    const std::int64_t staged = multiplier_ == 1 ? 0 : simd::DepthwiseTiling::kMaxPixels * g_.c;
-    return pointer_bytes() + simd::aligned_floats_bytes(staged);
+    return pointer_bytes() + simd::aligned_floats_bytes(multiplier_ == 1 ? 0 : g_.out_w * g_.c);
   }
 
   // Tasks are some rows by a chunk of channels, large enough to be worth handing out.
@@ -91,68 +84,67 @@ class DepthwiseKernel final : public Kernel {
     }
   }
 
-  void run_tile(const KernelCall& call, const simd::DepthwiseTiling& tiling, std::int64_t row,
-                std::int64_t j, std::int64_t channel, int worker) const {
+  void run_row(const KernelCall& call, std::int64_t row, std::int64_t channel, int worker) const {
     std::byte* own = call.workspace + static_cast<std::size_t>(worker) * worker_bytes();
-    auto* pointers = reinterpret_cast<const float**>(own);
-    const std::int64_t pixels = std::min(tiling.pixels(), g_.out_w - j);
+    auto* lines = reinterpret_cast<const float**>(own);
     const std::int64_t y0 = row % g_.out_h * g_.stride_h - g_.pad_top;
-    const std::int64_t x0 = j * g_.stride_w - g_.pad_left;
     const float* image = call.inputs[0].data + row / g_.out_h * g_.h * g_.w * g_.c + channel;
     // Kernel rows within the image lie side by side.
     std::int64_t u_first = 0;
     while (u_first < g_.kernel_h && y0 + u_first * g_.dilation_h < 0) ++u_first;
     std::int64_t u_end = u_first;
-    while (u_end < g_.kernel_h && y0 + u_end * g_.dilation_h < g_.h) ++u_end;
-    for (std::int64_t u = u_first; u < u_end; ++u) {
-      const float* line = image + (y0 + u * g_.dilation_h) * g_.w * g_.c;
-      for (std::int64_t i = 0; i < tiling.columns(); ++i) {
-        const std::int64_t x = x0 + tiling.x(i);
-        const bool reads = x >= 0 && x < g_.w && tiling.used(i, pixels);
-        pointers[(u - u_first) * tiling.columns() + i] = reads ? line + x * g_.c : nullptr;
-      }
+    for (; u_end < g_.kernel_h && y0 + u_end * g_.dilation_h < g_.h; ++u_end) {
+      lines[u_end - u_first] = image + (y0 + u_end * g_.dilation_h) * g_.w * g_.c;
     }
 
-    simd::DepthwiseTile tile;
-    tile.inputs = pointers;
-    tile.kernel_rows = u_end - u_first;
-    tile.weight_stride = g_.c;
-    tile.channels = std::min(chunk_, g_.c - channel);
-    tile.pixels = pixels;
-    const std::int64_t at = (row * g_.out_w + j) * g_.out_c;
-    float* out = call.output.data + at;
-    const float* residual = call.residual == nullptr ? nullptr : call.residual + at;
+    simd::DepthwiseRow part;
+    part.lines = lines;
+    part.kernel_rows = u_end - u_first;
+    part.input_w = g_.w;
+    part.input_stride = g_.c;
+    part.first_x = -g_.pad_left;
+    part.kernel_w = g_.kernel_w;
+    part.stride = g_.stride_w;
+    part.dilation = g_.dilation_w;
+    part.weight_stride = g_.c;
+    part.channels = std::min(chunk_, g_.c - channel);
+    part.out_w = g_.out_w;
+    part.out_stride = g_.c;
+    part.low = -kInfinity;
+    part.high = kInfinity;
+    float* out = call.output.data + row * g_.out_w * g_.out_c;
+    const float* residual =
+        call.residual == nullptr ? nullptr : call.residual + row * g_.out_w * g_.out_c;
+    const std::int64_t first_weight = u_first * g_.kernel_w * g_.c;
     if (multiplier_ == 1) {
-      tile.weights = weights_.data() + u_first * g_.kernel_w * g_.c + channel;
-      tile.bias = bias_.data() + channel;
-      tile.out = out + channel;
-      tile.out_stride = g_.c;
-      tile.residual = residual == nullptr ? nullptr : residual + channel;
-      tile.low = bounds_ ? bounds_->low : -kInfinity;
-      tile.high = bounds_ ? bounds_->high : kInfinity;
-      tile.run(tiling);
+      part.weights = weights_.data() + first_weight + channel;
+      part.bias = bias_.data() + channel;
+      part.out = out + channel;
+      part.residual = residual == nullptr ? nullptr : residual + channel;
+      if (bounds_) {
+        part.low = bounds_->low;
+        part.high = bounds_->high;
+      }
+      simd::depthwise_row(part);
       if (bounds_) return;
-      for (std::int64_t p = 0; p < pixels; ++p) {
-        float* values = out + p * g_.c + channel;
-        simd::activate_row(activation_, values, values, tile.channels);
+      for (std::int64_t j = 0; j < g_.out_w; ++j) {
+        float* values = out + j * g_.c + channel;
+        simd::activate_row(activation_, values, values, part.channels);
       }
       return;
     }
     auto* stage = reinterpret_cast<float*>(own + pointer_bytes());
-    tile.out = stage;
-    tile.out_stride = g_.c;
-    tile.low = -kInfinity;
-    tile.high = kInfinity;
+    part.out = stage;
     for (std::int64_t m = 0; m < multiplier_; ++m) {
-      tile.weights = weights_.data() + (m * taps_ + u_first * g_.kernel_w) * g_.c;
-      tile.bias = bias_.data() + m * g_.c;
-      tile.run(tiling);
-      for (std::int64_t i = 0; i < pixels * g_.c; ++i) {
+      part.weights = weights_.data() + m * taps_ * g_.c + first_weight;
+      part.bias = bias_.data() + m * g_.c;
+      simd::depthwise_row(part);
+      for (std::int64_t i = 0; i < g_.out_w * g_.c; ++i) {
         const std::int64_t to = i * multiplier_ + m;
         out[to] = residual == nullptr ? stage[i] : stage[i] + residual[to];
       }
     }
-    simd::activate_row(activation_, out, out, pixels * g_.out_c);
+    simd::activate_row(activation_, out, out, g_.out_w * g_.out_c);
   }
 
   Conv2dGeometry g_;

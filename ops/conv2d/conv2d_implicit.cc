@@ -101,6 +101,8 @@ class ImplicitKernel final : public Kernel {
       }
       product.panels = packed.panels() + column * taps_ * tap_floats_;
       product.bias = packed.bias() + column;
+      product.next_panels = simd::next_panels(tasks_, task % tasks_.count(), call.threads,
+                                              packed.panels(), taps_ * tap_floats_);
       product.cols = std::min(tasks_.group_panels * simd::kPanel, g_.group_out() - column);
       const std::int64_t at = row * g_.out_c + group * g_.group_out() + column;
       product.c = call.output.data + at;

@@ -41,6 +41,7 @@ class MatrixKernel final : public Kernel {
       product.rows = std::min(tasks_.strip_rows, rows_ - row);
       product.panels = packed_.panels() + column * in_;
       product.bias = packed_.bias() + column;
+      product.next_panels = simd::next_panels(tasks_, task, call.threads, packed_.panels(), in_);
       product.cols = std::min(tasks_.group_panels * simd::kPanel, out_ - column);
       product.c = call.output.data + row * out_ + column;
       product.c_stride = out_;

@@ -32,151 +32,188 @@ constexpr int kVectorsOf7 = 1;
 
 // What a stored sum still needs.
 template <class D, class V = hn::Vec<D>>
-HWY_INLINE void finish(D d, const DepthwiseTile& t, V sum, int pixel, std::int64_t channel) {
-  const std::int64_t at = pixel * t.out_stride + channel;
-  if (t.residual != nullptr) sum = hn::Add(sum, hn::LoadU(d, t.residual + at));
-  sum = at_most(d, at_least(d, sum, hn::Set(d, t.low)), hn::Set(d, t.high));
-  hn::StoreU(sum, d, t.out + at);
+HWY_INLINE void finish(D d, const DepthwiseRow& row, V sum, std::int64_t pixel,
+                       std::int64_t channel) {
+  const std::int64_t at = pixel * row.out_stride + channel;
+  if (row.residual != nullptr) sum = hn::Add(sum, hn::LoadU(d, row.residual + at));
+  sum = at_most(d, at_least(d, sum, hn::Set(d, row.low)), hn::Set(d, row.high));
+  hn::StoreU(sum, d, row.out + at);
 }
 
-// Input column kX meets every window that covers it: loaded once, used up to kWidth times.
-template <int kX, int kWidth, int kStride, int kPixels, int kVectors, class D, class V>
-HWY_INLINE void add_column(D d, const float* pixel, const V (&weights)[kWidth][kVectors],
+// Some neighbouring output pixels: `count` of them from `pixel`, whose windows begin at column x.
+struct Tile {
+  const DepthwiseRow& row;
+  std::int64_t pixel;
+  std::int64_t count;
+  std::int64_t x;
+};
+
+// Input column kX, counted from the tile's first, meets every window that covers it: loaded once,
+// used up to kWidth times. Left out when it is not in [begin, end).
+template <bool kInside, int kX, int kWidth, int kStride, int kPixels, int kVectors, class D,
+          class V = hn::Vec<D>>
+HWY_INLINE void add_column(D d, const float* line, std::int64_t stride, std::int64_t begin,
+                           std::int64_t end, const V (&weights)[kWidth][kVectors],
                            V (&sum)[kPixels][kVectors]) {
-  if (pixel == nullptr) return;
+  if (!kInside && (kX < begin || kX >= end)) return;
+  const float* pixel = line + kX * stride;
   LEADSMAN_UNROLL
   for (int i = 0; i < kVectors; ++i) {
     const V value = hn::LoadU(d, pixel + i * static_cast<int>(hn::MaxLanes(d)));
     LEADSMAN_UNROLL
     for (int v = 0; v < kWidth; ++v) {
       if (kX >= v && (kX - v) % kStride == 0 && (kX - v) / kStride < kPixels) {
-        constexpr int kLast = kPixels - 1;
-        const int p = std::min((kX - v) / kStride, kLast);
+        const int p = std::min((kX - v) / kStride, kPixels - 1);
         sum[p][i] = hn::MulAdd(value, weights[v][i], sum[p][i]);
       }
     }
   }
 }
 
-template <int kWidth, int kStride, int kPixels, int kVectors, class D, int... kX>
-HWY_INLINE void add_row(D d, const float* const* inputs, std::int64_t channel,
-                        const hn::Vec<D> (&weights)[kWidth][kVectors],
-                        hn::Vec<D> (&sum)[kPixels][kVectors], std::integer_sequence<int, kX...>) {
-  (add_column<kX, kWidth, kStride>(d, inputs[kX] == nullptr ? nullptr : inputs[kX] + channel,
-                                   weights, sum),
+template <bool kInside, int kStride, int kWidth, int kPixels, int kVectors, class D, int... kX>
+HWY_INLINE void add_line(D d, const float* line, std::int64_t stride, std::int64_t begin,
+                         std::int64_t end, const hn::Vec<D> (&weights)[kWidth][kVectors],
+                         hn::Vec<D> (&sum)[kPixels][kVectors], std::integer_sequence<int, kX...>) {
+  (add_column<kInside, kX, kWidth, kStride, kPixels, kVectors>(d, line, stride, begin, end, weights,
+                                                               sum),
    ...);
 }
 
-template <int kWidth, int kStride, int kPixels, int kVectors>
-HWY_INLINE void channel_block(const DepthwiseTile& t, std::int64_t channel) {
+template <bool kInside, int kWidth, int kStride, int kPixels, int kVectors>
+HWY_INLINE void channel_block(const Tile& tile, std::int64_t channel) {
   using D = hn::ScalableTag<float>;
   using V = hn::Vec<D>;
   const D d;
+  const DepthwiseRow& row = tile.row;
   constexpr int kLanes = static_cast<int>(hn::MaxLanes(D()));
   constexpr int kColumns = (kPixels - 1) * kStride + kWidth;
   V sum[kPixels][kVectors];
   LEADSMAN_UNROLL
   for (int i = 0; i < kVectors; ++i) {
-    const V bias = hn::LoadU(d, t.bias + channel + i * kLanes);
+    const V bias = hn::LoadU(d, row.bias + channel + i * kLanes);
     LEADSMAN_UNROLL
     for (int p = 0; p < kPixels; ++p) sum[p][i] = bias;
   }
-  const float* w = t.weights + channel;
-  for (std::int64_t u = 0; u < t.kernel_rows; ++u) {
+  const std::int64_t begin = -tile.x;
+  const std::int64_t end = std::min(row.input_w - tile.x, (tile.count - 1) * kStride + kWidth);
+  const float* w = row.weights + channel;
+  const std::int64_t offset = tile.x * row.input_stride + channel;
+  for (std::int64_t u = 0; u < row.kernel_rows; ++u) {
     V weights[kWidth][kVectors];
     LEADSMAN_UNROLL
     for (int v = 0; v < kWidth; ++v) {
       LEADSMAN_UNROLL
       for (int i = 0; i < kVectors; ++i) {
-        weights[v][i] = hn::LoadU(d, w + v * t.weight_stride + i * kLanes);
+        weights[v][i] = hn::LoadU(d, w + v * row.weight_stride + i * kLanes);
       }
     }
-    add_row<kWidth, kStride>(d, t.inputs + u * kColumns, channel, weights, sum,
-                             std::make_integer_sequence<int, kColumns>());
-    w += kWidth * t.weight_stride;
+    add_line<kInside, kStride>(d, row.lines[u] + offset, row.input_stride, begin, end, weights, sum,
+                               std::make_integer_sequence<int, kColumns>());
+    w += kWidth * row.weight_stride;
   }
   LEADSMAN_UNROLL
   for (int p = 0; p < kPixels; ++p) {
-    if (p < t.pixels) {
+    if (kInside || p < tile.count) {
       LEADSMAN_UNROLL
-      for (int i = 0; i < kVectors; ++i) finish(d, t, sum[p][i], p, channel + i * kLanes);
-    }
-  }
-}
-
-template <int kWidth, int kStride, int kPixels, int kVectors>
-void special_tile(const DepthwiseTile& t) {
-  constexpr auto kLanes = static_cast<std::int64_t>(hn::MaxLanes(hn::ScalableTag<float>()));
-  std::int64_t c = 0;
-  for (; c + kVectors * kLanes <= t.channels; c += kVectors * kLanes) {
-    channel_block<kWidth, kStride, kPixels, kVectors>(t, c);
-  }
-  for (; c < t.channels; c += kLanes) {
-    channel_block<kWidth, kStride, kPixels, 1>(t, std::min(c, t.channels - kLanes));
-  }
-}
-
-// Any window: a pointer for each tap of each of 8 pixels.
-constexpr int kGeneralPixels = static_cast<int>(DepthwiseTiling::kGeneralPixels);
-
-template <class D>
-void general_tile(const DepthwiseTile& t, std::int64_t taps) {
-  using V = hn::Vec<D>;
-  const D d;
-  constexpr auto kLanes = static_cast<std::int64_t>(hn::MaxLanes(D()));
-  for (std::int64_t block = 0; block < t.channels; block += kLanes) {
-    const std::int64_t c = std::min(block, t.channels - kLanes);
-    V sum[kGeneralPixels];
-    const V bias = hn::LoadU(d, t.bias + c);
-    LEADSMAN_UNROLL
-    for (int p = 0; p < kGeneralPixels; ++p) sum[p] = bias;
-    for (std::int64_t tap = 0; tap < taps; ++tap) {
-      const V weight = hn::LoadU(d, t.weights + tap * t.weight_stride + c);
-      const float* const* inputs = t.inputs + tap * kGeneralPixels;
-      LEADSMAN_UNROLL
-      for (int p = 0; p < kGeneralPixels; ++p) {
-        if (inputs[p] != nullptr) {
-          sum[p] = hn::MulAdd(hn::LoadU(d, inputs[p] + c), weight, sum[p]);
-        }
+      for (int i = 0; i < kVectors; ++i) {
+        finish(d, row, sum[p][i], tile.pixel + p, channel + i * kLanes);
       }
     }
-    LEADSMAN_UNROLL
-    for (int p = 0; p < kGeneralPixels; ++p) {
-      if (p < t.pixels) finish(d, t, sum[p], p, c);
+  }
+}
+
+template <bool kInside, int kWidth, int kStride, int kPixels, int kVectors>
+HWY_INLINE void special_tile(const Tile& tile) {
+  constexpr auto kLanes = static_cast<std::int64_t>(hn::MaxLanes(hn::ScalableTag<float>()));
+  const std::int64_t channels = tile.row.channels;
+  std::int64_t c = 0;
+  for (; c + kVectors * kLanes <= channels; c += kVectors * kLanes) {
+    channel_block<kInside, kWidth, kStride, kPixels, kVectors>(tile, c);
+  }
+  for (; c < channels; c += kLanes) {
+    channel_block<kInside, kWidth, kStride, kPixels, 1>(tile, std::min(c, channels - kLanes));
+  }
+}
+
+// A row of a window that has code of its own.
+template <int kWidth, int kStride, int kPixels, int kVectors>
+void special_row(const DepthwiseRow& row) {
+  constexpr int kColumns = (kPixels - 1) * kStride + kWidth;
+  for (std::int64_t j = 0; j < row.out_w; j += kPixels) {
+    const Tile tile{row, j, std::min<std::int64_t>(kPixels, row.out_w - j),
+                    row.first_x + j * kStride};
+    if (tile.count == kPixels && tile.x >= 0 && tile.x + kColumns <= row.input_w) {
+      special_tile<true, kWidth, kStride, kPixels, kVectors>(tile);
+    } else {
+      special_tile<false, kWidth, kStride, kPixels, kVectors>(tile);
     }
   }
 }
 
-// Tiles of 14 pixels need 32 registers.
-bool has_tiles_of_14() {
-  return kVectorsOf7 == 2;
+// Any window, 8 pixels at a time.
+template <class D>
+void general_row(const DepthwiseRow& row) {
+  using V = hn::Vec<D>;
+  const D d;
+  constexpr int kPixels = 8;
+  constexpr auto kLanes = static_cast<std::int64_t>(hn::MaxLanes(D()));
+  for (std::int64_t j = 0; j < row.out_w; j += kPixels) {
+    const std::int64_t count = std::min<std::int64_t>(kPixels, row.out_w - j);
+    for (std::int64_t block = 0; block < row.channels; block += kLanes) {
+      const std::int64_t c = std::min(block, row.channels - kLanes);
+      const float* weights = row.weights + c;
+      V sum[kPixels];
+      const V bias = hn::LoadU(d, row.bias + c);
+      LEADSMAN_UNROLL
+      for (int p = 0; p < kPixels; ++p) sum[p] = bias;
+      for (std::int64_t u = 0; u < row.kernel_rows; ++u) {
+        for (std::int64_t v = 0; v < row.kernel_w; ++v) {
+          const V weight = hn::LoadU(d, weights);
+          weights += row.weight_stride;
+          const std::int64_t x = row.first_x + j * row.stride + v * row.dilation;
+          LEADSMAN_UNROLL
+          for (int p = 0; p < kPixels; ++p) {
+            const std::int64_t at = x + p * row.stride;
+            if (p < count && at >= 0 && at < row.input_w) {
+              const V value = hn::LoadU(d, row.lines[u] + at * row.input_stride + c);
+              sum[p] = hn::MulAdd(value, weight, sum[p]);
+            }
+          }
+        }
+      }
+      LEADSMAN_UNROLL
+      for (int p = 0; p < kPixels; ++p) {
+        if (p < count) finish(d, row, sum[p], j + p, c);
+      }
+    }
+  }
 }
 
-// `pixels` 14 or 7 of the windows that have code of their own; 0: any window.
-void depthwise_tile(const DepthwiseTile& t, std::int64_t kernel_w, std::int64_t stride,
-                    std::int64_t pixels) {
+// 7 divides the usual sizes of images (7, 14, 28, ...); tiles of 14 pixels need 32 registers.
+template <int kWidth, int kStride>
+void special_row(const DepthwiseRow& row) {
+  if constexpr (kVectorsOf7 == 2) {
+    if ((row.out_w + 13) / 14 * 14 - row.out_w < 7) {
+      return special_row<kWidth, kStride, 14, 1>(row);
+    }
+  }
+  return special_row<kWidth, kStride, 7, kVectorsOf7>(row);
+}
+
+void depthwise_row(const DepthwiseRow& row) {
   constexpr auto kLanes = static_cast<std::int64_t>(hn::MaxLanes(hn::ScalableTag<float>()));
-  if (pixels == 0) {
-    const std::int64_t taps = t.kernel_rows * kernel_w;
-    if (t.channels >= kLanes) return general_tile<hn::ScalableTag<float>>(t, taps);
-    if (t.channels >= 4 && kLanes >= 4) return general_tile<hn::CappedTag<float, 4>>(t, taps);
-    return general_tile<hn::CappedTag<float, 1>>(t, taps);
+  if (row.channels >= kLanes && row.dilation == 1) {
+    const std::int64_t window =
+        row.kernel_w < 10 && row.stride < 10 ? row.kernel_w * 10 + row.stride : 0;
+    if (window == 31) return special_row<3, 1>(row);
+    if (window == 32) return special_row<3, 2>(row);
+    if (window == 51) return special_row<5, 1>(row);
+    if (window == 52) return special_row<5, 2>(row);
+    if (window == 71) return special_row<7, 1>(row);
   }
-  const std::int64_t key = kernel_w * 10 + stride;
-#if HWY_TARGET == HWY_AVX3 || HWY_TARGET == HWY_NEON
-  if (pixels == 14) {
-    if (key == 31) return special_tile<3, 1, 14, 1>(t);
-    if (key == 32) return special_tile<3, 2, 14, 1>(t);
-    if (key == 51) return special_tile<5, 1, 14, 1>(t);
-    if (key == 52) return special_tile<5, 2, 14, 1>(t);
-    if (key == 71) return special_tile<7, 1, 14, 1>(t);
-  }
-#endif
-  if (key == 31) return special_tile<3, 1, 7, kVectorsOf7>(t);
-  if (key == 32) return special_tile<3, 2, 7, kVectorsOf7>(t);
-  if (key == 51) return special_tile<5, 1, 7, kVectorsOf7>(t);
-  if (key == 52) return special_tile<5, 2, 7, kVectorsOf7>(t);
-  return special_tile<7, 1, 7, kVectorsOf7>(t);
+  if (row.channels >= kLanes) return general_row<hn::ScalableTag<float>>(row);
+  if (row.channels >= 4 && kLanes >= 4) return general_row<hn::CappedTag<float, 4>>(row);
+  general_row<hn::CappedTag<float, 1>>(row);
 }
 
 }  // namespace leadsman::ops::simd::HWY_NAMESPACE
@@ -184,52 +221,11 @@ HWY_AFTER_NAMESPACE();
 
 #if HWY_ONCE
 namespace leadsman::ops::simd {
-namespace {
 
-HWY_EXPORT(depthwise_tile);
-HWY_EXPORT(has_tiles_of_14);
+HWY_EXPORT(depthwise_row);
 
-bool has_own_code(std::int64_t kernel_w, std::int64_t stride) {
-  return (stride == 1 && (kernel_w == 3 || kernel_w == 5 || kernel_w == 7)) ||
-         (stride == 2 && (kernel_w == 3 || kernel_w == 5));
-}
-
-}  // namespace
-
-DepthwiseTiling::DepthwiseTiling(std::int64_t out_w, std::int64_t channels, std::int64_t kernel_w,
-                                 std::int64_t stride, std::int64_t dilation)
-    : kernel_w_(kernel_w), stride_(stride), dilation_(dilation), special_pixels_(0) {
-  constexpr std::int64_t kLongestVector = 16;
-  if (dilation > 1 || channels < kLongestVector || !has_own_code(kernel_w, stride)) return;
-  // 7 divides the usual sizes (7, 14, 28, ...).
-  const bool wide = (out_w + 13) / 14 * 14 - out_w < 7;
-  special_pixels_ = wide && HWY_DYNAMIC_DISPATCH(has_tiles_of_14)() ? 14 : 7;
-}
-
-std::int64_t DepthwiseTiling::columns() const {
-  if (special_pixels_ == 0) return kernel_w_ * kGeneralPixels;
-  return (special_pixels_ - 1) * stride_ + kernel_w_;
-}
-
-std::int64_t DepthwiseTiling::max_columns(std::int64_t kernel_w, std::int64_t stride) {
-  const std::int64_t general = kernel_w * kGeneralPixels;
-  if (!has_own_code(kernel_w, stride)) return general;
-  return std::max(general, (kMaxPixels - 1) * stride + kernel_w);
-}
-
-std::int64_t DepthwiseTiling::x(std::int64_t index) const {
-  if (special_pixels_ != 0) return index;
-  return index % kGeneralPixels * stride_ + index / kGeneralPixels * dilation_;
-}
-
-bool DepthwiseTiling::used(std::int64_t index, std::int64_t pixels) const {
-  if (special_pixels_ != 0) return index < (pixels - 1) * stride_ + kernel_w_;
-  return index % kGeneralPixels < pixels;
-}
-
-void DepthwiseTile::run(const DepthwiseTiling& tiling) const {
-  HWY_DYNAMIC_DISPATCH(depthwise_tile)
-  (*this, tiling.kernel_w_, tiling.stride_, tiling.special_pixels_);
+void depthwise_row(const DepthwiseRow& row) {
+  HWY_DYNAMIC_DISPATCH(depthwise_row)(row);
 }
 
 }  // namespace leadsman::ops::simd

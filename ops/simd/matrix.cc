@@ -221,16 +221,15 @@ void matrix_product(const MatrixCall& call) {
     tile.b = call.panels + column / kPanel * panel_stride + column % kPanel;
     tile.bias = call.bias + column;
     tile.cols = call.cols - column;
-    // The next columns' panels, spread over this column's tiles.
-    const std::int64_t next = (column + width * kLanes) / kPanel;
-    const std::int64_t next_end =
-        std::min((column + 2 * width * kLanes + kPanel - 1) / kPanel, panel_count(call.cols));
-    const std::int64_t next_bytes =
-        next > column / kPanel && next_end > next
-            ? (next_end - next) * panel_stride * static_cast<std::int64_t>(sizeof(float))
-            : 0;
+    // The panels of the columns that follow are fetched meanwhile, spread over this column's tiles.
+    const std::int64_t next = column + width * kLanes;
+    const float* ahead =
+        next < call.cols ? call.panels + next / kPanel * panel_stride : call.next_panels;
     const std::int64_t blocks = row_tiles * call.taps * (call.depth / kUnroll);
-    tile.prefetch_step = next_bytes == 0 || blocks == 0 ? 0 : (next_bytes + blocks - 1) / blocks;
+    const std::int64_t ahead_bytes =
+        width * kLanes * depth * static_cast<std::int64_t>(sizeof(float));
+    const bool fetches = ahead != nullptr && blocks > 0 && next % kPanel == 0;
+    tile.prefetch_step = fetches ? (ahead_bytes + blocks - 1) / blocks : 0;
 
     for (std::int64_t i = 0; i < row_tiles; ++i) {
       const std::int64_t row = i * call.rows / row_tiles;
@@ -247,7 +246,7 @@ void matrix_product(const MatrixCall& call) {
       tile.c = call.c + row * call.c_stride + column;
       tile.residual =
           call.residual == nullptr ? nullptr : call.residual + row * call.c_stride + column;
-      tile.prefetch = reinterpret_cast<const char*>(call.panels + next * panel_stride) +
+      tile.prefetch = reinterpret_cast<const char*>(ahead) +
                       i * call.taps * (call.depth / kUnroll) * tile.prefetch_step;
       kTiles[rows - 1][static_cast<std::size_t>(shift)](tile);
       if (!bounds) {
@@ -290,6 +289,13 @@ MatrixTasks::MatrixTasks(std::int64_t rows, std::int64_t depth, std::int64_t col
     group_panels /= 2;
   }
   groups = (panels + group_panels - 1) / group_panels;
+}
+
+const float* next_panels(const MatrixTasks& tasks, std::int64_t task, int threads,
+                         const float* panels, std::int64_t depth) {
+  const std::int64_t next = task + threads;
+  if (tasks.groups == 1 || next >= tasks.count()) return nullptr;
+  return panels + next % tasks.groups * tasks.group_panels * depth * kPanel;
 }
 
 }  // namespace leadsman::ops::simd

@@ -32,6 +32,8 @@ struct MatrixCall {
   const float* panels = nullptr;
   const float* bias = nullptr;
   std::int64_t cols = 0;
+  /// Panels that this thread is likely to read next; fetched meanwhile. A hint, or null.
+  const float* next_panels = nullptr;
 
   float* c = nullptr;
   std::int64_t c_stride = 0;
@@ -52,5 +54,10 @@ struct MatrixTasks {
   MatrixTasks(std::int64_t rows, std::int64_t depth, std::int64_t cols);
   std::int64_t count() const { return strips * groups; }
 };
+
+/// Hint for MatrixCall::next_panels of task `task` of a product of packed `panels`, when `threads`
+/// threads take tasks in turn; null when its panels are at hand anyway.
+const float* next_panels(const MatrixTasks& tasks, std::int64_t task, int threads,
+                         const float* panels, std::int64_t depth);
 
 }  // namespace leadsman::ops::simd
