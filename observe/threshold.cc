@@ -160,6 +160,11 @@ double shrink_gain(const Question& q) {
   return ratio_or_one(norm(q.inputs[0]), norm(q.output));
 }
 
+// One token of many: its share of the error may be larger than the mean.
+double select_gain(const Question& q) {
+  return 2.0 * ratio_or_one(rms(q.inputs[0]), rms(q.output));
+}
+
 using Gain = double (*)(const Question&);
 
 Gain gain_of(const std::string& op) {
@@ -176,6 +181,7 @@ Gain gain_of(const std::string& op) {
       {"attention", attention_gain},
       {"attention_weights", attention_gain},
       {"activation", shrink_gain},
+      {"select", select_gain},
   };
   const auto found = gains.find(op);
   return found == gains.end() ? nullptr : found->second;

@@ -15,7 +15,7 @@
 // with a second term for the rounding of the result and of functions such as exp. The constants
 // cover both libraries' errors; what they leave as a margin is measured in
 // tests/observe/threshold_test.cc. The gain is also by how much independent relative errors of the
-// inputs grow on their way through the layer, which is what chained thresholds are made of.
+// inputs grow on their way through the layer, which chained comparison needs.
 #pragma once
 
 #include <span>

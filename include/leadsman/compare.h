@@ -16,7 +16,9 @@ using ReferenceSource = std::function<std::optional<Tensor>(const std::string& n
 enum class CompareMode {
   /// Each layer gets the reference's own inputs, so an error belongs to that layer alone.
   kIsolated,
-  /// Our activations flow on from layer to layer; thresholds grow with them.
+  /// Our activations flow on from layer to layer. Each layer is allowed its own rounding and what
+  /// the errors measured at its inputs become on their way through; behind a departure, only what
+  /// that layer was allowed.
   kChained,
 };
 
