@@ -120,6 +120,27 @@ TEST(ClassToken, IsUndoneBySelect) {
   }
 }
 
+// Where memory order is logical order already, nothing is copied.
+TEST(Flatten, IsAViewWhereverTheBytesAgree) {
+  const auto is_view = [](const Shape& shape) {
+    const OpCase c{.op = "flatten", .inputs = {Tensor(shape)}};
+    return ops::find_operator("flatten")->is_view(op_context(c));
+  };
+  EXPECT_TRUE(is_view({2, 5}));
+  EXPECT_TRUE(is_view({2, 5, 3}));
+  EXPECT_TRUE(is_view({2, 5, 1, 1}));
+  EXPECT_TRUE(is_view({2, 1, 3, 4}));
+  EXPECT_FALSE(is_view({2, 5, 1, 2}));
+  EXPECT_FALSE(is_view({2, 2, 2, 2}));
+}
+
+TEST(ImageToTokensAndIdentity, AreAlwaysViews) {
+  for (const char* op : {"image_to_tokens", "identity"}) {
+    const OpCase c{.op = op, .inputs = {Tensor(Shape{2, 3, 4, 5})}};
+    EXPECT_TRUE(ops::find_operator(op)->is_view(op_context(c))) << op;
+  }
+}
+
 // Every strategy copes with an empty batch.
 TEST(EmptyBatch, GivesAnEmptyOutput) {
   const Tensor image(Shape{0, 3, 4, 4});
