@@ -23,7 +23,7 @@ int main(int argc, char** argv) {
 
   CLI::App app{"Runs image classifiers on boards without a GPU and shows every layer.", "leadsman"};
   app.set_version_flag("--version", std::string("leadsman ") + leadsman::kVersion);
-  app.require_subcommand(1);
+  app.require_subcommand(0, 1);  // 1 would hide which word is no command
   app.footer(
       "A classifier's answer is not a safety function.\n"
       "Exit codes: 0 done, 1 a finding, 2 wrong usage, 3 bad input file, 4 not enough memory.\n"
@@ -48,7 +48,8 @@ int main(int argc, char** argv) {
         return code;
       }
     }
-    return 0;
+    std::cerr << app.help();
+    return static_cast<int>(ErrorKind::kUsage);
   } catch (const CLI::ParseError& error) {
     if (error.get_exit_code() == 0) return app.exit(error);
     return report(std::string(error.what()) + "\n(leadsman COMMAND --help shows how)",

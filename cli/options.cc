@@ -19,10 +19,13 @@ std::int64_t parse_side(std::string_view text, const std::string& whole) {
 
 }  // namespace
 
-void ModelOptions::add_to(CLI::App& command) {
+void ModelOptions::add_to(CLI::App& command, bool with_size) {
   command.add_option("BUNDLE", bundle, "Folder or .safetensors file of a model")->required();
-  command.add_option("--size", size, "Image size, HEIGHTxWIDTH or one side (default: the model's)")
-      ->type_name("HxW");
+  if (with_size) {
+    command
+        .add_option("--size", size, "Image size, HEIGHTxWIDTH or one side (default: the model's)")
+        ->type_name("HxW");
+  }
   command.add_option("--threads", threads, "Threads (default: the CPUs this process may use)")
       ->type_name("N");
   command.add_flag("--oracle", oracle, "Run the plain reference kernels, unfused (slow, exact)");

@@ -16,13 +16,12 @@ struct ModelOptions {
   int threads = 0;
   bool oracle = false;
 
-  void add_to(CLI::App& command);
+  void add_to(CLI::App& command, bool with_size = true);
   /// {height, width}; {0, 0} when --size was not given. Throws Error(kUsage).
   std::pair<std::int64_t, std::int64_t> parsed_size() const;
   PlanOptions plan_options(const Bundle& model) const;
 };
 
-/// What goes into the model: pictures, or a ready tensor.
 /// Picture-to-input conversion at the model's size (the bundle's preprocess, scaled by --size).
 /// Throws Error(kInput) when the bundle has none.
 Preprocess preprocessing(const Bundle& model, const ModelOptions& options);

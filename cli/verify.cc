@@ -114,7 +114,7 @@ Command add_verify(CLI::App& app) {
   CLI::App* command =
       app.add_subcommand("verify", "Compare every layer with what the training framework computed");
   auto options = std::make_shared<VerifyOptions>();
-  options->model.add_to(*command);
+  options->model.add_to(*command, /*with_size=*/false);  // the reference's input sets it
   command
       ->add_option("--reference", options->reference,
                    "Tensors of another library (default: reference.safetensors in the bundle)")
@@ -127,9 +127,6 @@ Command add_verify(CLI::App& app) {
   command->footer("Example: leadsman verify examples/buttons/bundles/conv --mode chained");
   return [options] {
     const Bundle model = load_bundle(options->model.bundle);
-    if (!options->model.size.empty()) {
-      throw_usage("--size: the reference's input sets the size");
-    }
     if (options->reference.empty()) options->reference = model.reference_path;
     if (options->reference.empty()) {
       throw_usage(options->model.bundle + " holds no reference.safetensors; give --reference FILE");

@@ -97,12 +97,23 @@ class Fuser {
         step.epilogue.activation.kind != ops::ActivationKind::kNone) {
       return false;
     }
-    const ValueId other = reader.inputs[reader.inputs[0] == step.output ? 1 : 0];
+    const ValueId other = behind_views(reader.inputs[reader.inputs[0] == step.output ? 1 : 0], s);
     if (other == step.output) return false;
     if (producer_[other] != kNobody && producer_[other] >= s) return false;
     step.residual = other;
     step.epilogue.has_residual = true;
     return true;
+  }
+
+  // A view that comes after step `s` (an identity shortcut, say) holds bytes that may be there
+  // before it. An observed one stays: a hook may overwrite it.
+  ValueId behind_views(ValueId value, std::size_t s) const {
+    while (producer_[value] != kNobody && producer_[value] >= s && !plan_.values[value].observed) {
+      const Step& producer = plan_.steps[producer_[value]];
+      if (!producer.op->is_view(producer.context) || producer.output != value) break;
+      value = producer.inputs[0];
+    }
+    return value;
   }
 
   static bool append_activation(Step& step, const Step& reader) {

@@ -39,6 +39,20 @@ TEST(Fusion, GivesTheResidualToTheBranchComputedLast) {
             (Names{"b.down.conv", "b.down.bn", "b.add", "b.relu2"}));
 }
 
+TEST(Fusion, SeesThroughAShortcutThatIsAView) {
+  GraphBuilder b;
+  b.image(3, 6, 6);
+  b.conv("first", "image", 3, 4, 1);
+  b.conv("main", "first", 4, 4, 3);
+  b.layer("shortcut", "identity", {"first"});
+  b.layer("add", "add", {"main", "shortcut"});
+  b.output("add");
+  EXPECT_EQ(step_with(*make(b), "main"), (Names{"main", "add"}));
+  PlanOptions options;
+  options.observe = {"shortcut"};
+  EXPECT_EQ(step_with(*make(b, options), "main"), (Names{"main"}));
+}
+
 TEST(Fusion, TakesGeluAndResidualIntoTransformerProducts) {
   const auto plan = make(testing::small_transformer());
   EXPECT_EQ(step_with(*plan, "block0.fc1"), (Names{"block0.fc1", "block0.gelu"}));
