@@ -11,6 +11,7 @@
 
 #include "loaders/picture_formats.h"
 #include "loaders/picture_jpeg_pixels.h"
+#include "loaders/picture_jpeg_tables.h"
 #include "loaders/stb.h"
 
 namespace leadsman::loaders {
@@ -40,6 +41,10 @@ class JpegCheck {
   std::int64_t height() const { return height_; }
   std::span<const std::byte> exif() const { return exif_; }
   JpegColours colours() const;
+  /// Standard Huffman tables that the file uses without defining them: DHT segments, and where they
+  /// belong.
+  const std::vector<std::byte>& missing_tables() const { return missing_tables_; }
+  std::size_t first_scan() const { return first_scan_; }
 
  private:
   struct Component {
@@ -69,6 +74,7 @@ class JpegCheck {
   Segment read_segment();
   void read_quantization(Segment segment);
   void read_huffman(Segment segment);
+  void add_standard_tables();
   void read_frame(std::uint32_t marker, Segment segment);
   void read_scan(Segment segment);
   void check_tables(const Component& component, std::uint32_t tables, bool needs_dc,
@@ -89,6 +95,8 @@ class JpegCheck {
   std::array<bool, 4> ac_tables_{};
   std::int64_t restart_interval_ = 0;
   int scans_ = 0;
+  std::size_t first_scan_ = 0;
+  std::vector<std::byte> missing_tables_;
   bool jfif_ = false;
   std::optional<std::uint8_t> adobe_transform_;
   bool exif_seen_ = false;
@@ -143,6 +151,23 @@ void JpegCheck::read_huffman(Segment segment) {
   }
 }
 
+void JpegCheck::add_standard_tables() {
+  const auto add = [&](bool& defined, std::span<const std::uint8_t> table) {
+    if (defined) return;
+    defined = true;
+    const std::size_t length = table.size() + 2;
+    for (const std::size_t value :
+         {std::size_t{0xff}, std::size_t{0xc4}, length >> 8, length & 255}) {
+      missing_tables_.push_back(static_cast<std::byte>(value));
+    }
+    for (const std::uint8_t value : table) missing_tables_.push_back(std::byte{value});
+  };
+  add(dc_tables_[0], kDcTable0);
+  add(dc_tables_[1], kDcTable1);
+  add(ac_tables_[0], kAcTable0);
+  add(ac_tables_[1], kAcTable1);
+}
+
 void JpegCheck::read_frame(std::uint32_t marker, Segment segment) {
   need(marker <= 0xc2,
        "is JPEG with lossless, hierarchical or arithmetic coding, which is not read");
@@ -188,6 +213,10 @@ void JpegCheck::check_tables(const Component& component, std::uint32_t tables, b
 void JpegCheck::read_scan(Segment segment) {
   need(!components_.empty(), "has a JPEG scan before its frame header");
   need(++scans_ <= kMostScans, "has more than 100 JPEG scans");
+  if (scans_ == 1) {
+    first_scan_ = segment.start - 4;
+    if (!progressive_) add_standard_tables();
+  }
   const std::size_t bytes = segment.end - segment.start;
   const std::size_t count = bytes == 0 ? 0 : source_.at(segment.start);
   need(count >= 1 && count <= components_.size() && bytes == 4 + 2 * count,
@@ -332,7 +361,15 @@ DecodedPicture decode_jpeg(const PictureSource& source) {
   JpegCheck check(source);
   check.run();
   JpegPlanes planes;
-  const std::string problem = stb_decode_jpeg(source.bytes, jpeg_inverse_transform, planes);
+  std::span<const std::byte> bytes = source.bytes;
+  std::vector<std::byte> completed;
+  if (!check.missing_tables().empty()) {
+    completed.assign(bytes.begin(), bytes.end());
+    completed.insert(completed.begin() + static_cast<std::ptrdiff_t>(check.first_scan()),
+                     check.missing_tables().begin(), check.missing_tables().end());
+    bytes = completed;
+  }
+  const std::string problem = stb_decode_jpeg(bytes, jpeg_inverse_transform, planes);
   if (!problem.empty()) source.fail(problem);
   DecodedPicture decoded{make_picture(source, check.width(), check.height()), check.exif()};
   jpeg_planes_to_rgb(planes, check.colours(), decoded.picture);

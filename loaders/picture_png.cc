@@ -153,39 +153,38 @@ void unpack(const PictureSource& source, std::span<const std::byte> data,
   if (filled != samples.size()) source.fail("has PNG data that does not fill the picture");
 }
 
-std::uint8_t paeth(int left, int above, int corner) {
-  const int guess = left + above - corner;
-  const int to_left = std::abs(guess - left);
-  const int to_above = std::abs(guess - above);
-  const int to_corner = std::abs(guess - corner);
-  if (to_left <= to_above && to_left <= to_corner) return static_cast<std::uint8_t>(left);
-  return static_cast<std::uint8_t>(to_above <= to_corner ? above : corner);
+int paeth(int left, int above, int corner) {
+  const int to_left = std::abs(above - corner);  // of the guess left + above - corner
+  const int to_above = std::abs(left - corner);
+  const int to_corner = std::abs(left + above - 2 * corner);
+  const int nearer = to_above <= to_corner ? above : corner;
+  return to_left <= std::min(to_above, to_corner) ? left : nearer;
 }
 
-// Clause 9. `above` is the row before, nullptr at the top.
+// Clause 9. `above` is the row before, zeros at the top.
 bool unfilter(int filter, std::uint8_t* row, const std::uint8_t* above, std::int64_t bytes,
               std::int64_t step) {
-  if (filter == 0) return true;
-  const auto put = [&](std::int64_t i, int value) {
+  const auto add = [row](std::int64_t i, int value) {
     row[i] = static_cast<std::uint8_t>(row[i] + value);
   };
-  const auto left = [&](std::int64_t i) { return i < step ? 0 : static_cast<int>(row[i - step]); };
-  const auto up = [&](std::int64_t i) { return above == nullptr ? 0 : static_cast<int>(above[i]); };
+  const std::int64_t start = std::min(step, bytes);  // what has nothing to its left
   switch (filter) {
+    case 0:
+      return true;
     case 1:
-      for (std::int64_t i = step; i < bytes; ++i) put(i, row[i - step]);
+      for (std::int64_t i = start; i < bytes; ++i) add(i, row[i - step]);
       return true;
     case 2:
-      if (above != nullptr) {
-        for (std::int64_t i = 0; i < bytes; ++i) put(i, above[i]);
-      }
+      for (std::int64_t i = 0; i < bytes; ++i) add(i, above[i]);
       return true;
     case 3:
-      for (std::int64_t i = 0; i < bytes; ++i) put(i, (left(i) + up(i)) / 2);
+      for (std::int64_t i = 0; i < start; ++i) add(i, above[i] / 2);
+      for (std::int64_t i = start; i < bytes; ++i) add(i, (row[i - step] + above[i]) / 2);
       return true;
     case 4:
-      for (std::int64_t i = 0; i < bytes; ++i) {
-        put(i, paeth(left(i), up(i), i < step || above == nullptr ? 0 : above[i - step]));
+      for (std::int64_t i = 0; i < start; ++i) add(i, above[i]);
+      for (std::int64_t i = start; i < bytes; ++i) {
+        add(i, paeth(row[i - step], above[i], above[i - step]));
       }
       return true;
     default:
@@ -264,13 +263,14 @@ DecodedPicture decode_png(const PictureSource& source) {
   unpack(source, png.data, samples);
   DecodedPicture decoded{make_picture(source, png.width, png.height), png.exif};
   std::vector<std::uint8_t> line(static_cast<std::size_t>(png.width * 3));
+  const std::vector<std::uint8_t> zeros(static_cast<std::size_t>(png.row_bytes(png.width)));
   const std::int64_t step = std::max(1, png.samples() * png.depth / 8);
   std::uint8_t* row = samples.data();
   for (const Pass& pass : passes) {
     const std::int64_t columns = columns_of(pass);
     if (columns == 0) continue;
     const std::int64_t row_bytes = png.row_bytes(columns);
-    const std::uint8_t* above = nullptr;
+    const std::uint8_t* above = zeros.data();
     for (std::int64_t y = 0; y < rows_of(pass); ++y) {
       const int filter = *row++;
       if (!unfilter(filter, row, above, row_bytes, step)) {

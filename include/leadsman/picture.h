@@ -1,22 +1,22 @@
 // Pictures from JPEG, PNG, BMP and PNM files, as 8-bit RGB.
 //
-// Every kind of file becomes RGB as Pillow 9.4 does it with convert("RGB"), since that is what most
-// classifiers were trained behind:
+// Every kind of file becomes RGB as Pillow 9.4 does it with convert("RGB"), byte for byte, since
+// that is what most classifiers were trained behind (for JPEG that is libjpeg-turbo with its
+// default, accurate settings):
 //   - grey is replicated; an alpha channel and PNG transparency are dropped, not composited;
 //   - 1-, 2- and 4-bit grey is spread over 0..255; palette entries that the file leaves out are
 //     the grey of their own index;
 //   - 16-bit colour and 16-bit grey with alpha keep the high byte, but 16-bit grey (PNG, and PGM
-//     with more than 8 bits, spread over 0..65535) is *clipped* at 255: nearly white. It looks
-//     wrong and is what the model would have seen;
+//     of more than 8 bits, spread over 0..65535) is *clipped* at 255: nearly white. It looks wrong
+//     and is what a model behind Pillow would have seen;
 //   - CMYK and YCCK JPEG is taken as inverted, as Adobe's programs write it.
-// Colour profiles and gamma are not applied. PNG, BMP and PNM come out equal to Pillow's; JPEG
-// within 4 levels, mostly 0 or 1, as its inverse transform and chroma interpolation are rounded
-// differently from libjpeg's (measured in tests/loaders/picture_test.cc).
+// Colour profiles and gamma are not applied.
 //
-// Not read: JPEG with arithmetic coding, lossless or of more than 8 bits; run-length BMP;
-// everything else. A file that is cut short, or whose checksums or restart markers do not fit, is
-// an error. What cannot be seen is damage inside JPEG data that leaves the markers whole; libjpeg
-// does not see it either.
+// Not read: JPEG with arithmetic coding, lossless or of other than 8 bits; run-length BMP; all
+// other kinds of file. A file that is cut short, or whose checksums, tables or restart markers do
+// not fit, is an error, also where Pillow would show what is left of it. What cannot be seen is
+// damage inside JPEG data that leaves the markers whole: as in libjpeg, the rest of the picture is
+// then wrong.
 #pragma once
 
 #include <cstddef>
