@@ -19,11 +19,11 @@ namespace leadsman::ops::simd::HWY_NAMESPACE {
 
 namespace hn = hwy::HWY_NAMESPACE;
 
-// The larger of v and low, v when that is NaN. The x86 instruction returns its second operand
-// when either is NaN, the Arm one returns NaN; the portable form needs a comparison.
+// The larger of v and low, v when that is NaN. The x86 instruction returns its second operand when
+// either is NaN; that of Arm (as Highway uses it) the number, so a comparison has to do there.
 template <class D, class V = hn::Vec<D>>
 HWY_INLINE V at_least(D, V v, V low) {
-#if HWY_TARGET == HWY_SCALAR || HWY_TARGET == HWY_EMU128
+#if !HWY_ARCH_X86 || HWY_TARGET == HWY_SCALAR || HWY_TARGET == HWY_EMU128
   return hn::IfThenElse(hn::Lt(v, low), low, v);
 #else
   return hn::Max(low, v);
@@ -32,7 +32,7 @@ HWY_INLINE V at_least(D, V v, V low) {
 
 template <class D, class V = hn::Vec<D>>
 HWY_INLINE V at_most(D, V v, V high) {
-#if HWY_TARGET == HWY_SCALAR || HWY_TARGET == HWY_EMU128
+#if !HWY_ARCH_X86 || HWY_TARGET == HWY_SCALAR || HWY_TARGET == HWY_EMU128
   return hn::IfThenElse(hn::Gt(v, high), high, v);
 #else
   return hn::Min(high, v);
