@@ -31,6 +31,7 @@ import linecache
 import math
 import operator
 import os
+import re
 import sys
 import types
 
@@ -1659,6 +1660,25 @@ def settle_batch_norm(module, inputs):
                 m.momentum = momentum
 
 
+def picture_like(count, height, width, channels=3, seed=0):
+    """Seeded [count, channels, height, width]: blotches of every size, each picture its own mix.
+
+    White noise is a poor stand-in for pictures: to a deep network all noise looks alike, and batch
+    statistics taken from it would blow up what little differs.
+    """
+    generator = torch.Generator().manual_seed(seed)
+    pictures = torch.zeros(count, channels, height, width)
+    side = 2
+    while side < max(height, width):
+        strength = torch.rand(count, 1, 1, 1, generator=generator)
+        blotches = torch.randn(count, channels, side, side, generator=generator)
+        pictures += strength * F.interpolate(
+            blotches, size=(height, width), mode="bilinear", align_corners=False
+        )
+        side = side * 5 // 2
+    return pictures
+
+
 # ---------------------------------------------------------------------------------------------
 # Command line: models of torchvision
 
@@ -1727,13 +1747,15 @@ def main(arguments=None):
     extra = {"num_classes": len(labels)}
     if name.startswith("vit_"):  # asserts its image size
         extra["image_size"] = size[0]
+    if re.match("(wide_)?res(net|next)", name):  # as they are trained (Goyal et al. 2017)
+        extra["zero_init_residual"] = True
     module = builder(weights=None, **extra)
-    example = torch.randn(1, 3, *size)
+    example = picture_like(1, *size, seed=options.seed + 1)
     if options.checkpoint:
         _load_checkpoint(module, options.checkpoint)
     else:
         vary_constant_parameters(module, options.seed)
-        settle_batch_norm(module, torch.randn(8, 3, *size))
+        settle_batch_norm(module, picture_like(8, *size, seed=options.seed + 2))
     preprocess = _torchvision_preprocess(torchvision, name, size)
     try:
         summary = export(module, example, options.out, labels, preprocess, name=name)
