@@ -142,32 +142,40 @@ class ImplicitKernel final : public Kernel {
   // table[tap * strip_rows + r]: where tap `tap` of output pixel first + r begins.
   void fill_table(const float* image, std::int64_t first, std::int64_t count,
                   const float** table) const {
+    for (std::int64_t r = 0; r < count;) {
+      const std::int64_t row = (first + r) / g_.out_w;
+      const std::int64_t j = (first + r) % g_.out_w;
+      const std::int64_t some = std::min(count - r, g_.out_w - j);
+      fill_line(image, row / g_.out_h, row % g_.out_h, j, some, table + r);
+      r += some;
+    }
+  }
+
+  // The same for `count` pixels from column j of output row i of image n.
+  void fill_line(const float* image, std::int64_t n, std::int64_t i, std::int64_t j,
+                 std::int64_t count, const float** table) const {
     const bool padded = mode_ == Taps::kPaddedRows;
     const std::int64_t width = padded ? padded_w_ : g_.w;
     const std::int64_t pad_left = padded ? 0 : g_.pad_left;
     const std::int64_t taps_w = by_rows_ ? 1 : g_.kernel_w;
-    std::int64_t j = first % g_.out_w;
-    std::int64_t i = first / g_.out_w % g_.out_h;
-    std::int64_t n = first / g_.out_w / g_.out_h;
-    for (std::int64_t r = 0; r < count; ++r) {
-      const float** entry = table + r;
-      for (std::int64_t u = 0; u < g_.kernel_h; ++u) {
-        const std::int64_t y = i * g_.stride_h + u * g_.dilation_h - g_.pad_top;
-        const bool inside = y >= 0 && y < g_.h;
-        const float* line = image + ((n * g_.h + (inside ? y : 0)) * width) * g_.c;
-        std::int64_t x = j * g_.stride_w - pad_left;
-        for (std::int64_t v = 0; v < taps_w; ++v) {
-          *entry = inside && x >= 0 && x < width ? line + x * g_.c : zeros_.data();
-          entry += tasks_.strip_rows;
-          x += g_.dilation_w;
-        }
-      }
-      if (++j == g_.out_w) {
-        j = 0;
-        if (++i == g_.out_h) {
-          i = 0;
-          ++n;
-        }
+    const std::int64_t step = g_.stride_w * g_.c;
+    for (std::int64_t u = 0; u < g_.kernel_h; ++u) {
+      const std::int64_t y = i * g_.stride_h + u * g_.dilation_h - g_.pad_top;
+      const bool inside = y >= 0 && y < g_.h;
+      const float* line = image + ((n * g_.h + (inside ? y : 0)) * width) * g_.c;
+      for (std::int64_t v = 0; v < taps_w; ++v) {
+        const std::int64_t x = j * g_.stride_w + v * g_.dilation_w - pad_left;
+        // Pixels [begin, end) read the image, those before and behind them the padding.
+        const std::int64_t begin = !inside  ? count
+                                   : x >= 0 ? 0
+                                            : std::min(count, (g_.stride_w - 1 - x) / g_.stride_w);
+        const std::int64_t end =
+            x >= width ? begin : std::clamp((width - 1 - x) / g_.stride_w + 1, begin, count);
+        std::fill_n(table, begin, zeros_.data());
+        std::int64_t at = (x + begin * g_.stride_w) * g_.c;
+        for (std::int64_t r = begin; r < end; ++r, at += step) table[r] = line + at;
+        std::fill_n(table + end, count - end, zeros_.data());
+        table += tasks_.strip_rows;
       }
     }
   }

@@ -57,8 +57,12 @@ void AttentionPlan::pack_keys(HeadRows keys, float* packed) const {
     const std::int64_t some = std::min(kPanel, keys_ - first);
     const float* from = keys.data + first * keys.stride;
     for (std::int64_t e = 0; e < d_; ++e) {
-      for (std::int64_t i = 0; i < some; ++i) packed[i] = from[i * keys.stride + e];
-      std::fill(packed + some, packed + kPanel, 0.0F);
+      if (some == kPanel) {
+        for (std::int64_t i = 0; i < kPanel; ++i) packed[i] = from[i * keys.stride + e];
+      } else {
+        for (std::int64_t i = 0; i < some; ++i) packed[i] = from[i * keys.stride + e];
+        std::fill(packed + some, packed + kPanel, 0.0F);
+      }
       packed += kPanel;
     }
   }
@@ -71,8 +75,12 @@ void AttentionPlan::pack_values(HeadRows values, float* packed) const {
     for (std::int64_t first = 0; first < d_; first += kPanel) {
       const std::int64_t some = std::min(kPanel, d_ - first);
       for (std::int64_t key = begin; key < end; ++key) {
-        float* rest = std::copy_n(values.data + key * values.stride + first, some, packed);
-        std::fill(rest, packed + kPanel, 0.0F);
+        const float* from = values.data + key * values.stride + first;
+        if (some == kPanel) {  // of a fixed length: a few vector moves
+          std::copy_n(from, kPanel, packed);
+        } else {
+          std::fill(std::copy_n(from, some, packed), packed + kPanel, 0.0F);
+        }
         packed += kPanel;
       }
     }

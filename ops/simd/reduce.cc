@@ -84,12 +84,18 @@ HWY_INLINE float largest_of(const float* in, std::int64_t count) {
   float largest = -std::numeric_limits<float>::infinity();
   std::int64_t i = 0;
   if (count >= kLanes) {
-    V vector = hn::LoadU(d, in);
-    for (i = kLanes; i + kLanes <= count; i += kLanes) {
-      vector = hn::Max(vector, hn::LoadU(d, in + i));
+    V even = hn::LoadU(d, in);
+    V odd = even;
+    for (i = kLanes; i + 2 * kLanes <= count; i += 2 * kLanes) {
+      even = hn::Max(even, hn::LoadU(d, in + i));
+      odd = hn::Max(odd, hn::LoadU(d, in + i + kLanes));
+    }
+    if (i + kLanes <= count) {
+      even = hn::Max(even, hn::LoadU(d, in + i));
+      i += kLanes;
     }
     HWY_ALIGN float lanes[kLanes];
-    hn::Store(vector, d, lanes);
+    hn::Store(hn::Max(even, odd), d, lanes);
     for (const float lane : lanes) largest = std::max(largest, lane);
   }
   for (; i < count; ++i) largest = std::max(largest, in[i]);
@@ -136,8 +142,12 @@ void scale(const float* in, float* out, std::int64_t count, float factor) {
 }
 
 float exponentiate_row(float* scores, std::int64_t count, float& largest) {
-  largest = std::max(largest, largest_of(scores, count));
-  return exponentials(scores, scores, count, largest);
+  const std::int64_t whole = (count + kLanes - 1) / kLanes * kLanes;
+  for (std::int64_t i = count; i < whole; ++i) {
+    scores[i] = -std::numeric_limits<float>::infinity();
+  }
+  largest = std::max(largest, largest_of(scores, whole));
+  return exponentials(scores, scores, whole, largest);
 }
 
 void softmax_row(const float* in, float* out, std::int64_t count) {

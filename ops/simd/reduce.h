@@ -16,7 +16,8 @@ void layer_norm_row(const float* in, const float* weight, const float* bias, flo
 void softmax_row(const float* in, float* out, std::int64_t count);
 
 /// One block of an online softmax (Milakov & Gimelshein 2018): raises `largest` to the largest of
-/// the scores, replaces each by exp(score - largest), and returns their sum.
+/// the scores, replaces each by exp(score - largest), and returns their sum. Requires room behind
+/// the scores up to a multiple of 16 floats; what stands there is overwritten.
 float exponentiate_row(float* scores, std::int64_t count, float& largest);
 
 /// values *= factor.
