@@ -61,7 +61,9 @@ AtomicFile::AtomicFile(const std::string& path) : path_(path) {
   if (exists) {
     if (S_ISDIR(status.st_mode)) throw_input(path + ": is a folder, not a file");
     if (!S_ISREG(status.st_mode)) throw_input(path + ": is not a regular file");
-    if (::access(target_.c_str(), W_OK) != 0) fail("cannot be replaced", errno);
+    if (::faccessat(AT_FDCWD, target_.c_str(), W_OK, AT_EACCESS) != 0) {
+      fail("cannot be replaced", errno);
+    }
   }
   const std::string folder = folder_of(target_);
   for (int attempt = 0; fd_ < 0; ++attempt) {

@@ -3,6 +3,7 @@
 #include <algorithm>
 #include <array>
 #include <cmath>
+#include <cstdio>
 #include <limits>
 #include <span>
 #include <string>
@@ -87,7 +88,9 @@ T load(const std::byte* from, bool big_endian) {
 float narrowed(double value) {
   const float result = static_cast<float>(value);
   if (std::isinf(result) && !std::isinf(value)) {
-    throw_input("the value " + std::to_string(value) + " is beyond float32");
+    std::array<char, 32> digits{};
+    std::snprintf(digits.data(), digits.size(), "%.17g", value);
+    throw_input("the value " + std::string(digits.data()) + " is beyond float32");
   }
   return result;
 }

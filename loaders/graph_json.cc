@@ -148,6 +148,7 @@ GraphDocument parse_graph(std::string_view text, const std::string& file_name) {
   GraphDocument document;
   Graph& graph = document.graph;
   graph.name = root.member("name").text("a name");
+  if (graph.name.empty()) root.member("name").fail("a name may not be empty");
   for (const JsonCursor& input : root.member("inputs").items("a list of inputs")) {
     graph.inputs.push_back(parse_input(input));
   }

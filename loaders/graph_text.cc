@@ -1,10 +1,12 @@
 // Writes graph.json.
+#include <map>
 #include <type_traits>
 #include <variant>
 
 #include "leadsman/bundle.h"
 #include "loaders/json_text.h"
 #include "loaders/preprocess_json.h"
+#include "ops/operator.h"
 
 namespace leadsman {
 namespace {
@@ -58,6 +60,25 @@ std::string attribute_text(const AttributeValue& value) {
       value);
 }
 
+// What is left when the attributes that have their default value are left out.
+std::map<std::string, AttributeValue> told_attributes(const Layer& layer) {
+  std::map<std::string, AttributeValue> told(layer.attributes.values().begin(),
+                                             layer.attributes.values().end());
+  const ops::Operator* const op = ops::find_operator(layer.operator_name);
+  if (op == nullptr) return told;
+  Attributes required;
+  for (const ops::AttributeSpec& spec : op->contract().attributes) {
+    const auto found = told.find(std::string(spec.name));
+    if (!spec.fallback && found != told.end()) required.set(found->first, found->second);
+  }
+  const Attributes defaults = ops::complete_attributes(op->contract(), required);
+  for (const auto& [name, value] : defaults.values()) {
+    const auto found = told.find(name);
+    if (found != told.end() && !required.has(name) && found->second == value) told.erase(found);
+  }
+  return told;
+}
+
 std::string layer_text(const Layer& layer) {
   std::string text = "{\"name\": " + json_quoted(layer.name) +
                      ", \"operator\": " + json_quoted(layer.operator_name) +
@@ -70,7 +91,7 @@ std::string layer_text(const Layer& layer) {
     }
     text += std::string(",\n     \"") + key + "\": {" + object + "}";
   };
-  add_object("attributes", layer.attributes.values(), attribute_text);
+  add_object("attributes", told_attributes(layer), attribute_text);
   add_object("weights", layer.weights, json_quoted);
   return text + "}";
 }

@@ -106,9 +106,15 @@ class TreeBuilder {
 }  // namespace
 
 Json parse_json(std::string_view text) {
+  require_no_zero_byte(text);
   TreeBuilder builder(text);
   if (!Json::sax_parse(text.begin(), text.end(), &builder)) throw_input(builder.error());
   return builder.take();
+}
+
+void require_no_zero_byte(std::string_view text) {
+  const std::size_t at = text.find('\0');
+  if (at != std::string_view::npos) throw_input(json_syntax_error(text, at + 1, "a zero byte"));
 }
 
 std::string json_syntax_error(std::string_view text, std::size_t position,

@@ -20,6 +20,10 @@ inline constexpr int kMaxJsonDepth = 16;
 /// and memory are linear in the text.
 Json parse_json(std::string_view text);
 
+/// Throws Error(kInput), worded as a syntax error, when a zero byte stands in the text: the parser
+/// would take it for the end and not look at the rest.
+void require_no_zero_byte(std::string_view text);
+
 /// How a SAX handler words a syntax error: where it is, and the parser's reason cut down to a line.
 std::string json_syntax_error(std::string_view text, std::size_t position,
                               std::string_view parser_message);

@@ -46,9 +46,17 @@ PictureSize parse_size(const JsonCursor& value) {
 }
 
 std::vector<double> parse_numbers(const JsonCursor& value) {
+  const char* const what = "a list with a number for each channel";
   std::vector<double> numbers;
-  for (const JsonCursor& item : value.items("a list with a number for each channel")) {
-    numbers.push_back(item.number("a number"));
+  for (const JsonCursor& item : value.items(what)) numbers.push_back(item.number("a number"));
+  if (numbers.empty()) value.fail_type(what);
+  return numbers;
+}
+
+std::vector<double> parse_deviations(const JsonCursor& value) {
+  std::vector<double> numbers = parse_numbers(value);
+  for (std::size_t i = 0; i < numbers.size(); ++i) {
+    if (numbers[i] <= 0) value.fail("number " + std::to_string(i) + " is not above 0");
   }
   return numbers;
 }
@@ -95,7 +103,7 @@ Preprocess parse_preprocess(const JsonCursor& section) {
   }
   if (section.has("scale")) preprocess.scale = section.member("scale").number("a number");
   if (section.has("mean")) preprocess.mean = parse_numbers(section.member("mean"));
-  if (section.has("std")) preprocess.stddev = parse_numbers(section.member("std"));
+  if (section.has("std")) preprocess.stddev = parse_deviations(section.member("std"));
   try {
     check_preprocess(preprocess);
   } catch (const Error& error) {

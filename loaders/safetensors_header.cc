@@ -188,6 +188,7 @@ void check_entry(const SafetensorsEntry& entry, std::int64_t data_bytes) {
 }  // namespace
 
 SafetensorsHeader parse_safetensors_header(std::string_view text, std::int64_t data_bytes) {
+  require_no_zero_byte(text);
   HeaderReader reader(text);
   if (!Json::sax_parse(text.begin(), text.end(), &reader)) throw_input(reader.error());
   SafetensorsHeader header = reader.take();

@@ -256,8 +256,8 @@ void ZipWriter::add(std::string_view name, std::string_view head, Bytes body) {
   const std::uint64_t at = file_.written();
   const std::uint64_t bytes = head.size() + std::uint64_t{body.size()};
   const std::uint32_t crc = crc32(body, crc32(std::as_bytes(std::span(head))));
-  const bool big = bytes >= kMax32;
-  const bool far = at >= kMax32;
+  const bool big = bytes >= zip64_from_;
+  const bool far = at >= zip64_from_;
   const std::uint16_t version = big || far ? 45 : 20;
   const std::uint32_t shown = big ? kMax32 : static_cast<std::uint32_t>(bytes);
   const auto common = [&](std::string& to) {
@@ -311,7 +311,7 @@ void ZipWriter::finish() {
   const std::uint64_t bytes = directory_.size();
   file_.write(directory_);
   std::string end;
-  if (count_ >= kMax16 || bytes >= kMax32 || at >= kMax32) {
+  if (count_ >= kMax16 || bytes >= zip64_from_ || at >= zip64_from_) {
     append_le(end, kEnd64Mark);
     append_le(end, std::uint64_t{kEnd64Bytes - 12});
     append_le(end, std::uint16_t{45});

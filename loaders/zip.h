@@ -41,7 +41,9 @@ std::span<const std::byte> stored_zip_entry(std::span<const std::byte> file, con
 /// dated 1980-01-01.
 class ZipWriter {
  public:
-  explicit ZipWriter(AtomicFile& file) : file_(file) {}
+  /// Sizes and offsets from `zip64_from` on are written in 64 bits (tests need not write 4 GiB).
+  explicit ZipWriter(AtomicFile& file, std::uint64_t zip64_from = 0xffffffff)
+      : file_(file), zip64_from_(zip64_from) {}
   /// One entry whose bytes are `head` followed by `body`.
   void add(std::string_view name, std::string_view head, std::span<const std::byte> body);
   /// The directory; call once, last.
@@ -49,6 +51,7 @@ class ZipWriter {
 
  private:
   AtomicFile& file_;
+  std::uint64_t zip64_from_;
   std::string directory_;
   std::uint64_t count_ = 0;
 };

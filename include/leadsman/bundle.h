@@ -52,7 +52,8 @@ struct GraphDocument {
 /// nearest: 'layer1'". `file_name` is what messages begin with.
 GraphDocument parse_graph(std::string_view text, const std::string& file_name);
 
-/// The text of graph.json, one line a layer. Requires a graph that check_graph accepts.
+/// The text of graph.json; attributes that have their default value are left out. Requires a graph
+/// that check_graph accepts.
 std::string graph_text(const Graph& graph, const std::optional<Preprocess>& preprocess);
 
 /// Class names, one a line: UTF-8 without control characters, at most 1024 bytes each; line ends of
