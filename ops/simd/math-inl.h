@@ -40,12 +40,20 @@ HWY_INLINE V at_most(D, V v, V high) {
 }
 
 // e^x = 2^n * e^r, r = x - n ln 2 in two parts (Cody & Waite 1980), e^r by the polynomial of the
-// Cephes library's expf (Moshier). Overflows to infinity, underflows through subnormals to 0.
+// Cephes library's expf (Moshier). Requires |x| < 2^20 or NaN; n by adding 1.5 * 2^23, whose unit
+// in the last place is 1, so that the sum's bits hold it.
+template <class D>
+struct ReducedExponential {
+  hn::Vec<D> fraction;                   // e^r
+  hn::Vec<hn::RebindToSigned<D>> whole;  // n
+};
+
 template <class D, class V = hn::Vec<D>>
-HWY_INLINE V exponential(D d, V x) {
+HWY_INLINE ReducedExponential<D> reduce_exponential(D d, V x) {
   const hn::RebindToSigned<D> di;
-  x = at_most(d, at_least(d, x, hn::Set(d, -104.0F)), hn::Set(d, 89.0F));
-  const V n = hn::Round(hn::Mul(x, hn::Set(d, 1.44269504F)));
+  const V magic = hn::Set(d, 12582912.0F);
+  const V sum = hn::MulAdd(x, hn::Set(d, 1.44269504F), magic);
+  const V n = hn::Sub(sum, magic);
   V r = hn::NegMulAdd(n, hn::Set(d, 0.693359375F), x);
   r = hn::NegMulAdd(n, hn::Set(d, -2.12194440e-4F), r);
   V p = hn::Set(d, 1.9875691500e-4F);
@@ -54,14 +62,35 @@ HWY_INLINE V exponential(D d, V x) {
   p = hn::MulAdd(p, r, hn::Set(d, 4.1665795894e-2F));
   p = hn::MulAdd(p, r, hn::Set(d, 1.6666665459e-1F));
   p = hn::MulAdd(p, r, hn::Set(d, 5.0000001201e-1F));
-  p = hn::Add(hn::MulAdd(p, hn::Mul(r, r), r), hn::Set(d, 1.0F));
+  return {hn::Add(hn::MulAdd(p, hn::Mul(r, r), r), hn::Set(d, 1.0F)),
+          hn::Sub(hn::BitCast(di, sum), hn::BitCast(di, magic))};
+}
+
+// 2^n for -127 < n < 128.
+template <class D, class VI>
+HWY_INLINE hn::Vec<D> power_of_two(D d, VI n) {
+  const hn::RebindToSigned<D> di;
+  return hn::BitCast(d, hn::ShiftLeft<23>(hn::Add(n, hn::Set(di, 127))));
+}
+
+// Overflows to infinity, underflows through subnormals to 0.
+template <class D, class V = hn::Vec<D>>
+HWY_INLINE V exponential(D d, V x) {
+  x = at_most(d, at_least(d, x, hn::Set(d, -104.0F)), hn::Set(d, 89.0F));
+  const auto e = reduce_exponential(d, x);
   // 2^n in two factors, as n may be below the smallest exponent.
-  const auto whole = hn::ConvertTo(di, n);
-  const auto half = hn::ShiftRight<1>(whole);
-  const auto bias = hn::Set(di, 127);
-  const V scale1 = hn::BitCast(d, hn::ShiftLeft<23>(hn::Add(half, bias)));
-  const V scale2 = hn::BitCast(d, hn::ShiftLeft<23>(hn::Add(hn::Sub(whole, half), bias)));
-  return hn::Mul(hn::Mul(p, scale1), scale2);
+  const auto half = hn::ShiftRight<1>(e.whole);
+  return hn::Mul(hn::Mul(e.fraction, power_of_two(d, half)),
+                 power_of_two(d, hn::Sub(e.whole, half)));
+}
+
+// For x <= 0, with 0 below e^-86: what a softmax needs. Subnormals are slow on many processors.
+template <class D, class V = hn::Vec<D>>
+HWY_INLINE V exponential_of_negative(D d, V x) {
+  const V lowest = hn::Set(d, -86.0F);
+  const auto e = reduce_exponential(d, at_least(d, x, lowest));
+  const V value = hn::Mul(e.fraction, power_of_two(d, e.whole));
+  return hn::IfThenZeroElse(hn::Lt(x, lowest), value);
 }
 
 template <class D, class V = hn::Vec<D>>

@@ -102,7 +102,8 @@ HWY_INLINE float largest_of(const float* in, std::int64_t count) {
   return largest;
 }
 
-// out = exp(in - largest); returns the sum.
+// out = exp(in - largest), 0 below e^-86; returns the sum. Reads and writes whole vectors: the
+// last one's excess becomes 0.
 HWY_INLINE float exponentials(const float* in, float* out, std::int64_t count, float largest) {
   const D d;
   const V shift = hn::Set(d, largest);
@@ -110,25 +111,21 @@ HWY_INLINE float exponentials(const float* in, float* out, std::int64_t count, f
   V sum1 = sum0;
   std::int64_t i = 0;
   for (; i + 2 * kLanes <= count; i += 2 * kLanes) {
-    const V e0 = exponential(d, hn::Sub(hn::LoadU(d, in + i), shift));
-    const V e1 = exponential(d, hn::Sub(hn::LoadU(d, in + i + kLanes), shift));
+    const V e0 = exponential_of_negative(d, hn::Sub(hn::LoadU(d, in + i), shift));
+    const V e1 = exponential_of_negative(d, hn::Sub(hn::LoadU(d, in + i + kLanes), shift));
     hn::StoreU(e0, d, out + i);
     hn::StoreU(e1, d, out + i + kLanes);
     sum0 = hn::Add(sum0, e0);
     sum1 = hn::Add(sum1, e1);
   }
-  float sum = 0.0F;
   for (; i < count; i += kLanes) {
-    const std::int64_t some = std::min(kLanes, count - i);
-    HWY_ALIGN float buffer[kLanes] = {};
-    for (std::int64_t k = 0; k < some; ++k) buffer[k] = in[i + k];
-    hn::Store(exponential(d, hn::Sub(hn::Load(d, buffer), shift)), d, buffer);
-    for (std::int64_t k = 0; k < some; ++k) {
-      out[i + k] = buffer[k];
-      sum += buffer[k];
-    }
+    const V e =
+        hn::IfThenElseZero(hn::FirstN(d, static_cast<std::size_t>(count - i)),
+                           exponential_of_negative(d, hn::Sub(hn::LoadU(d, in + i), shift)));
+    hn::StoreU(e, d, out + i);
+    sum0 = hn::Add(sum0, e);
   }
-  return sum + sum_of(d, hn::Add(sum0, sum1));
+  return sum_of(d, hn::Add(sum0, sum1));
 }
 
 void scale(const float* in, float* out, std::int64_t count, float factor) {
@@ -142,16 +139,21 @@ void scale(const float* in, float* out, std::int64_t count, float factor) {
 }
 
 float exponentiate_row(float* scores, std::int64_t count, float& largest) {
+  largest = std::max(largest, largest_of(scores, count));
   const std::int64_t whole = (count + kLanes - 1) / kLanes * kLanes;
-  for (std::int64_t i = count; i < whole; ++i) {
-    scores[i] = -std::numeric_limits<float>::infinity();
-  }
-  largest = std::max(largest, largest_of(scores, whole));
-  return exponentials(scores, scores, whole, largest);
+  for (std::int64_t i = count; i < whole; ++i) scores[i] = largest;
+  return exponentials(scores, scores, count, largest);
 }
 
 void softmax_row(const float* in, float* out, std::int64_t count) {
-  const float sum = exponentials(in, out, count, largest_of(in, count));
+  // Whole vectors where they lie, the rest in a buffer.
+  const float largest = largest_of(in, count);
+  const std::int64_t whole = count / kLanes * kLanes;
+  HWY_ALIGN float rest[kLanes] = {};
+  for (std::int64_t i = whole; i < count; ++i) rest[i - whole] = in[i];
+  float sum = exponentials(in, out, whole, largest);
+  sum += exponentials(rest, rest, count - whole, largest);
+  for (std::int64_t i = whole; i < count; ++i) out[i] = rest[i - whole];
   scale(out, out, count, 1.0F / sum);
 }
 

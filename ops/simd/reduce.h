@@ -12,7 +12,8 @@ namespace leadsman::ops::simd {
 void layer_norm_row(const float* in, const float* weight, const float* bias, float eps, float* out,
                     std::int64_t count);
 
-/// out = exp(in - max) / sum. `in` and `out` may be the same. A NaN makes the whole row NaN.
+/// out = exp(in - max) / sum; what is below e^-86 of the largest becomes 0. `in` and `out` may be
+/// the same. A NaN makes the whole row NaN.
 void softmax_row(const float* in, float* out, std::int64_t count);
 
 /// One block of an online softmax (Milakov & Gimelshein 2018): raises `largest` to the largest of
