@@ -11,6 +11,7 @@
 // next of several copies of the layer. LEADSMAN_SIMD selects the instruction set.
 #include <algorithm>
 #include <array>
+#include <cstdio>
 #include <cstdlib>
 #include <cstring>
 #include <memory>
@@ -20,6 +21,7 @@
 #include <benchmark/benchmark.h>
 
 #include "bench/peak.h"
+#include "leadsman/error.h"
 #include "ops/operator.h"
 #include "ops/simd/aligned.h"
 #include "ops/simd/target.h"
@@ -188,7 +190,12 @@ void add_all() {
 }  // namespace leadsman::bench
 
 int main(int argc, char** argv) {
-  leadsman::ops::simd::choose_target();
+  try {
+    leadsman::ops::simd::choose_target();
+  } catch (const leadsman::Error& error) {
+    std::fprintf(stderr, "kernels_bench: %s\n", error.what());
+    return static_cast<int>(error.kind());
+  }
   std::vector<char*> rest;
   for (int i = 0; i < argc; ++i) {
     constexpr const char* kOption = "--threads=";

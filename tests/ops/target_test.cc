@@ -1,6 +1,9 @@
 #include "ops/simd/target.h"
 
 #include <algorithm>
+#include <cstdio>
+#include <cstdlib>
+#include <string>
 
 #include <gtest/gtest.h>
 
@@ -38,6 +41,28 @@ TEST(Target, ANameOfAnotherArchitectureIsRefused) {
       EXPECT_THROW(force_target(name), Error);
     }
   }
+}
+
+// The variable is read once, so each case is a process of its own.
+void choose_with(const char* name) {
+  setenv("LEADSMAN_SIMD", name, 1);
+  try {
+    choose_target();
+  } catch (const Error& error) {
+    std::fprintf(stderr, "%s", error.what());
+    std::exit(static_cast<int>(error.kind()));
+  }
+  std::fprintf(stderr, "uses %s", std::string(target_in_use()).c_str());
+  std::exit(0);
+}
+
+TEST(TargetDeathTest, TheEnvironmentVariableSelectsIt) {
+  GTEST_FLAG_SET(death_test_style, "threadsafe");
+  for (const std::string& name : supported_targets()) {
+    EXPECT_EXIT(choose_with(name.c_str()), ::testing::ExitedWithCode(0), "uses " + name);
+  }
+  EXPECT_EXIT(choose_with(""), ::testing::ExitedWithCode(0), "uses " + supported_targets()[0]);
+  EXPECT_EXIT(choose_with("mmx"), ::testing::ExitedWithCode(2), "LEADSMAN_SIMD: mmx is no");
 }
 
 }  // namespace
