@@ -32,8 +32,8 @@ constexpr std::uint16_t kUtf8Names = 1u << 11;
 constexpr std::uint16_t kDate = 1 << 5 | 1;  // 1980-01-01
 constexpr std::uint16_t kMax16 = 0xffff;
 constexpr std::uint32_t kMax32 = 0xffffffff;
-// Deflate codes at most 258 bytes in two bits (RFC 1951); a few bytes more for tiny entries.
-constexpr std::uint64_t kMaxExpansion = 258 * 4;
+// Bytes that one byte of deflate can stand for: 258 in two bits (RFC 1951).
+constexpr std::uint64_t kMaxExpansion = 1032;
 
 template <typename T>
 T number(Bytes bytes, std::size_t at) {

@@ -65,7 +65,7 @@ TEST(ParseJson, SaysWhereSyntaxIsWrong) {
        "/0/0/0/0/0/0/0/0/0/0/0/0/0/0/0: is nested more than 16 deep"},
   };
   for (const auto& [text, message] : cases) {
-    EXPECT_EQ(input_error([&] { parse_json(text); }), message) << text;
+    EXPECT_EQ(input_error([&text = text] { parse_json(text); }), message) << text;
   }
 }
 

@@ -41,7 +41,8 @@ TEST(Labels, SayWhichLineIsWrong) {
       {std::string(1025, 'x'), "line 1: a label of 1025 bytes; at most 1024 are read"},
   };
   for (const auto& [text, message] : cases) {
-    EXPECT_EQ(input_error([&] { parse_labels(text, "labels.txt"); }), "labels.txt: " + message);
+    EXPECT_EQ(input_error([&text = text] { parse_labels(text, "labels.txt"); }),
+              "labels.txt: " + message);
   }
   std::string many;
   for (int i = 0; i <= 1'000'000; ++i) many += "x\n";

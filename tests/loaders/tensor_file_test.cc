@@ -282,7 +282,7 @@ TEST(TensorFile, ReadsBackZip64) {
   const ScratchFolder folder;
   const Tensor a = counted({3, 5}, 0);
   const Tensor b = counted({7}, 2);
-  for (const std::uint64_t limit : {0, 100, 300, 100'000}) {
+  for (const std::uint64_t limit : {0u, 100u, 300u, 100'000u}) {
     const std::string path = folder / "x.npz";
     loaders::AtomicFile file(path);
     loaders::ZipWriter zip(file, limit);
