@@ -55,7 +55,11 @@ FREE_ROOMS = {"tests", "bench"}
 
 MOST_LINES = 450
 # Files that may be longer, each with the reason.
-LONG_FILES = {}
+LONG_FILES = {
+    # One file that a user copies beside a training script; its sections are its rooms.
+    "loaders/torch/leadsman_export.py",
+    "tests/loaders/torch/test_export.py",
+}
 SUFFIXES = {".cc", ".h", ".py", ".sh", ".cmake", ".in"}
 SKIPPED = {".git", "build", "out", "__pycache__", ".cache"}
 
