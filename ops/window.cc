@@ -1,7 +1,6 @@
 #include "ops/window.h"
 
 #include <string>
-#include <utility>
 
 #include "leadsman/error.h"
 
@@ -24,11 +23,11 @@ std::int64_t output_extent(const char* axis, std::int64_t size, std::int64_t ker
 }
 
 AttributeSpec size_spec(std::string_view name, AttributeType type,
-                        std::optional<AttributeValue> fallback, std::string_view meaning,
+                        const std::optional<AttributeValue>& fallback, std::string_view meaning,
                         double minimum) {
   return {.name = name,
           .type = type,
-          .fallback = std::move(fallback),
+          .fallback = fallback,
           .meaning = meaning,
           .minimum = minimum,
           .maximum = 65535,
