@@ -31,6 +31,7 @@ import linecache
 import math
 import operator
 import os
+import pickle
 import re
 import sys
 import types
@@ -235,6 +236,11 @@ class _Tracer(fx.Tracer):
 
     # What fx asks of a tracer.
 
+    def create_args_for_root(self, root_fn, is_module, concrete_args=None):
+        """The examples become the arguments; what was not given keeps its default."""
+        proxies = [self.create_proxy("placeholder", name, (), {}) for name in self.examples]
+        return root_fn, [self.root, *proxies]
+
     def is_leaf_module(self, m, module_qualified_name):
         if find_module_handler(m):
             return True
@@ -318,11 +324,11 @@ class _Tracer(fx.Tracer):
         args = fx.node.map_arg(node.args, self.value)
         kwargs = fx.node.map_arg(node.kwargs, self.value)
         run = {
-            "placeholder": lambda: self.examples.get(node.target, args[0] if args else None),
+            "placeholder": lambda: self.examples[node.target],
             "get_attr": lambda: operator.attrgetter(node.target)(self.root),
             "call_function": lambda: node.target(*args, **kwargs),
             "call_method": lambda: getattr(args[0], node.target)(*args[1:], **kwargs),
-            "call_module": lambda: self.root.get_submodule(node.target)(*args, **kwargs),
+            "call_module": lambda: self._run_module(node.target, args, kwargs),
         }
         self._running = True
         try:
@@ -330,9 +336,26 @@ class _Tracer(fx.Tracer):
         finally:
             self._running = False
 
+    def _run_module(self, path, args, kwargs):
+        """Hooks that look on are welcome; one that changes the output is no part of the graph."""
+        module = self.root.get_submodule(path)
+        if not (module._forward_hooks or module._forward_pre_hooks):
+            return module(*args, **kwargs)
+        args_, kwargs_ = fx.node.map_aggregate(
+            (args, kwargs), lambda a: a.clone() if isinstance(a, torch.Tensor) else a
+        )
+        result = module(*args, **kwargs)
+        for seen, plain in zip(_tensors_of(result), _tensors_of(module.forward(*args_, **kwargs_))):
+            if not _agree(seen, plain):
+                raise self.error(
+                    "a forward hook changes what the module computes",
+                    "remove the hook, or write what it does into the module",
+                )
+        return result
+
     def _is_about_sizes(self, node):
         query = node.args[1] if node.target is getattr else node.target
-        if node.op == "placeholder" or query in _SIZE_QUERIES or query in _SIZE_FUNCTIONS:
+        if query in _SIZE_QUERIES or query in _SIZE_FUNCTIONS:
             return True
         sources = node.all_input_nodes
         return bool(sources) and all(source in self.sizes for source in sources)
@@ -343,22 +366,14 @@ def _is_internal(file):
 
 
 def _examples_by_name(module, inputs):
-    """The example tensors, and the defaults of what was not given, by parameter of forward."""
-    parameters = inspect.signature(type(module).forward).parameters
-    given = inspect.signature(module.forward).bind(*inputs).arguments
-    for name, value in given.items():
-        if parameters[name].kind is inspect.Parameter.VAR_POSITIONAL:
-            raise ExportError(
-                f"forward takes its inputs as *{name}",
-                Origin("", type(module).__name__),
-                "give each input a parameter of its own",
-            )
-    defaults = {
-        name: parameter.default
-        for name, parameter in parameters.items()
-        if name not in given and parameter.default is not inspect.Parameter.empty
-    }
-    return given, defaults
+    """Copies of the example tensors by parameter of forward; those of *images are images_0, ..."""
+    bound = inspect.signature(type(module).forward).bind(module, *inputs)
+    examples = {}
+    for name, value in list(bound.arguments.items())[1:]:
+        several = bound.signature.parameters[name].kind is inspect.Parameter.VAR_POSITIONAL
+        named = {f"{name}_{i}": v for i, v in enumerate(value)} if several else {name: value}
+        examples.update((k, v.clone()) for k, v in named.items())
+    return examples
 
 
 @contextlib.contextmanager
@@ -392,12 +407,11 @@ def _recorded_builtins(tracer):
 
 def _trace(module, inputs):
     """The fx graph of `module` and the tracer that holds the nodes' values."""
-    examples, defaults = _examples_by_name(module, inputs)
-    tracer = _Tracer({name: value.clone() for name, value in examples.items()})
+    tracer = _Tracer(_examples_by_name(module, inputs))
     attributes = {m: dict(vars(m)) for m in module.modules()}
     try:
         with _recorded_builtins(tracer):
-            graph = tracer.trace(module, defaults or None)
+            graph = tracer.trace(module)
         for node in graph.nodes:
             if node.op == "get_attr":
                 tracer.value(node)
@@ -569,7 +583,7 @@ class Builder:
             return self._output(node)
         value = self.tracer.value(node)
         if node in self.tracer.sizes:
-            return fx.node.map_aggregate(value, _as_size)
+            return self._size(node, value)
         sources = [self.converted.get(n) for n in node.all_input_nodes]
         if node.op == "get_attr":
             return Constant(value, (node.target,))
@@ -587,8 +601,6 @@ class Builder:
 
     def _input(self, node):
         value = self.tracer.value(node)
-        if not isinstance(value, torch.Tensor):
-            return value
         origin = self.tracer.origins[node]
         kinds = {4: ("image", "NCHW"), 3: ("tokens", "NTC"), 2: ("features", "NC")}
         if value.dim() not in kinds or not value.is_floating_point():
@@ -633,11 +645,28 @@ class Builder:
             raise ExportError("the model returns no tensor", origin, "return one or more tensors")
         return None
 
+    def _size(self, node, value):
+        """A number or tuple with the example's sizes marked. Channels are the model's own."""
+        arguments = fx.node.map_arg(node.args, self._argument)
+        query = arguments[1] if node.target is getattr else node.target
+        if node.target is operator.getitem:
+            return arguments[0][arguments[1]]
+        if query in ("shape", "size") and isinstance(arguments[0], View):
+            view = arguments[0]
+            shape = self.tracer.value(node.args[0]).shape
+            sizes = tuple(n if axis == "C" else Size(n) for n, axis in zip(shape, view.axes))
+            dim = node.kwargs.get(
+                "dim", arguments[1] if query == node.target and arguments[1:] else None
+            )
+            return sizes if dim is None else sizes[dim]
+        marked = query in ("numel", "nelement", torch.numel) or _holds_size(arguments)
+        return fx.node.map_aggregate(value, _as_size) if marked else value
+
     def _constant(self, node, value, sources):
         if not isinstance(value, torch.Tensor):
             return value
         parts = [source for source in sources if isinstance(source, Constant)]
-        sized = any(n in self.tracer.sizes for n in node.all_input_nodes)
+        sized = _holds_size(sources)
         names = tuple(dict.fromkeys(name for part in parts for name in part.sources))
         return Constant(self.tracer.copies[node], names, sized or any(p.sized for p in parts))
 
@@ -729,6 +758,12 @@ class Builder:
 
 def _as_size(value):
     return Size(value) if type(value) is int else value
+
+
+def _holds_size(value):
+    if isinstance(value, (tuple, list)):
+        return any(_holds_size(item) for item in value)
+    return isinstance(value, Size)
 
 
 def _as_constant(value):
@@ -1508,7 +1543,8 @@ def export(module, example_input, folder, labels=None, preprocess=None, referenc
     """Writes `module` as a bundle into `folder` (made if it is not there).
 
     module          any nn.Module; it is run in eval mode and left as it was
-    example_input   a tensor [N, C, H, W] (or [N, T, C], [N, C]), or a tuple of several
+    example_input   a tensor [N, C, H, W] (or [N, T, C], [N, C]), or a tuple of several, for the
+                    first parameters of forward; others keep their defaults
     labels          optional class names, written to labels.txt
     preprocess      optional dict, see GRAPH_FORMAT.md
     reference       whether to write every layer's output for the example
@@ -1574,6 +1610,15 @@ def _tensors_of(output):
     return [tensor for tensor in tensors if isinstance(tensor, torch.Tensor)]
 
 
+def _agree(tensor, expected):
+    """Whether the same operations gave both; threads may have summed in another order."""
+    tensor, expected = tensor.double(), expected.double()
+    if tensor.shape != expected.shape:
+        return False
+    atol = 1e-4 * float(expected.abs().max()) if expected.numel() else 0
+    return torch.allclose(tensor, expected, rtol=1e-3, atol=atol)
+
+
 def _check(builder, expected):
     """The graph against its own rules, and against what the module itself returned."""
     origin = Origin("", type(builder.module).__name__)
@@ -1590,13 +1635,7 @@ def _check(builder, expected):
             _SAME_FOR_EVERY_PICTURE,
         )
     for name, tensor in zip(builder.outputs, expected):
-        traced = builder.reference[name].double()
-        tensor = tensor.double()
-        same_shape = traced.shape == tensor.shape
-        # The same operations ran, so more than a rounding (threads may sum differently) is a flaw.
-        if not same_shape or not torch.allclose(
-            traced, tensor, rtol=1e-3, atol=1e-4 * tensor.abs().max()
-        ):
+        if not _agree(builder.reference[name], tensor):
             raise ExportError(
                 f"the traced output {name} differs from what the model itself returns",
                 origin,
@@ -1708,6 +1747,11 @@ def _load_checkpoint(module, path):
     module.load_state_dict({k[7:] if k.startswith("module.") else k: v for k, v in state.items()})
 
 
+def _failed(error):
+    print(f"error: {error}", file=sys.stderr)
+    return 3
+
+
 def main(arguments=None):
     parser = argparse.ArgumentParser(
         description="Write a model of torchvision as a bundle.",
@@ -1731,8 +1775,11 @@ def main(arguments=None):
     meta = next(iter(torchvision.models.get_model_weights(name)))
     labels = meta.meta["categories"]
     if options.labels:
-        with open(options.labels, encoding="utf-8") as file:
-            labels = file.read().splitlines()
+        try:
+            with open(options.labels, encoding="utf-8") as file:
+                labels = file.read().splitlines()
+        except (OSError, UnicodeDecodeError) as error:
+            return _failed(f"{options.labels}: {error}")
     crop = meta.transforms().crop_size[0]
     size = (crop, crop)
     if options.size:
@@ -1746,22 +1793,29 @@ def main(arguments=None):
     builder = torchvision.models.get_model_builder(name)
     extra = {"num_classes": len(labels)}
     if name.startswith("vit_"):  # asserts its image size
+        if size[0] != size[1]:
+            parser.error(f"{name} of torchvision takes square images only, not {options.size}")
         extra["image_size"] = size[0]
     if re.match("(wide_)?res(net|next)", name):  # as they are trained (Goyal et al. 2017)
         extra["zero_init_residual"] = True
     module = builder(weights=None, **extra)
     example = picture_like(1, *size, seed=options.seed + 1)
     if options.checkpoint:
-        _load_checkpoint(module, options.checkpoint)
+        try:
+            _load_checkpoint(module, options.checkpoint)
+        except (OSError, RuntimeError, AttributeError, pickle.UnpicklingError) as error:
+            return _failed(
+                f"{options.checkpoint} is no checkpoint of {name} with {len(labels)} classes "
+                f"(--labels says how many there are): {error}"
+            )
     else:
         vary_constant_parameters(module, options.seed)
         settle_batch_norm(module, picture_like(8, *size, seed=options.seed + 2))
     preprocess = _torchvision_preprocess(torchvision, name, size)
     try:
         summary = export(module, example, options.out, labels, preprocess, name=name)
-    except ExportError as error:
-        print(f"error: {error}", file=sys.stderr)
-        return 3
+    except (ExportError, OSError) as error:
+        return _failed(error)
     print(f"{options.out}: {summary['layers']} layers, {summary['parameters']:,} parameters")
     return 0
 

@@ -1,6 +1,6 @@
 """Tests of loaders/torch/leadsman_export.py.
 
-Run: python3 -m unittest discover -s tests/loaders/torch (some two minutes on one busy core).
+Run: python3 -m unittest discover -s tests/loaders/torch (about half a minute).
 """
 
 import contextlib
@@ -335,6 +335,35 @@ class SizeTest(FolderTest):
         graph, _ = self.export(Cut(), torch.randn(1, 20, 6))  # all of it: the parameter itself
         self.assertEqual(graph["layers"][0]["weights"], {"weight": "place"})
 
+    def test_channels_may_be_read_from_the_shape(self):
+        class Depthwise(nn.Module):
+            def __init__(self):
+                super().__init__()
+                self.kernel = nn.Parameter(torch.randn(4, 1, 3, 3))
+
+            def forward(self, x):
+                n, c = x.shape[:2]
+                x = F.conv2d(x, self.kernel, groups=c)
+                x = F.conv2d(x, self.kernel, groups=x.size(1))
+                x = F.conv2d(x, self.kernel, groups=x.size(dim=1), padding=x.dim() - 3)
+                return x.reshape(n, c * x.shape[-1] * x.shape[-2])
+
+        graph, _ = self.export(Depthwise(), torch.randn(1, 4, 12, 9))
+        groups = [layer["attributes"]["groups"] for layer in graph["layers"][:3]]
+        self.assertEqual(groups, [4, 4, 4])
+
+    def test_sizes_by_functions_written_in_c(self):
+        class Reshapes(nn.Module):
+            def forward(self, x):
+                return torch.reshape(
+                    torch.reshape(x, (x.shape[0], x.shape[1], -1)), [x.size(0), -1]
+                )
+
+        reshape = torch.reshape
+        graph, _ = self.export(Reshapes(), torch.randn(1, 4, 6, 5))
+        self.assertEqual([layer["operator"] for layer in graph["layers"]], ["flatten"])
+        self.assertIs(torch.reshape, reshape)
+
 
 class NameTest(FolderTest):
     def test_reuse_and_functions(self):
@@ -578,6 +607,20 @@ class ErrorTest(FolderTest):
                     module.attention = mha
                 self.assertRegex(self.refuse(module, example).reason, reason)
 
+    def test_hooks(self):
+        module = nn.Sequential(nn.Conv2d(4, 4, 1), nn.ReLU())
+        seen = []
+        hook = module[0].register_forward_hook(lambda m, i, o: seen.append(o.detach()))
+        self.export(module, torch.randn(1, 4, 6, 6), reference=False)
+        self.assertTrue(seen)
+        hook.remove()
+        for name in os.listdir(self.folder):
+            os.remove(self.path(name))
+        module[0].register_forward_hook(lambda m, i, o: o * 2)
+        error = self.refuse(module)
+        self.assertRegex(error.reason, "hook changes")
+        self.assertEqual((error.path, error.class_name), ("0", "Conv2d"))
+
     def test_masks_are_refused(self):
         class Masked(nn.Module):
             def __init__(self):
@@ -689,6 +732,37 @@ class FileTest(FolderTest):
         deep = self.path("a/b/c")
         export(module, inputs, deep)
         self.assertEqual(graph_interpreter.read_graph(deep)["name"], "c")
+
+
+class InputTest(FolderTest):
+    def test_arguments_that_are_not_given(self):
+        class Optional(nn.Module):
+            def forward(self, image, mask=None, twice=False, *, name="x"):
+                image = F.relu(image)
+                if mask is not None or twice:
+                    image = image + mask
+                return {"out": image, "again": [image]} if name == "x" else None
+
+        graph, _ = self.export(Optional(), torch.randn(1, 3, 4, 4))
+        self.assertEqual(len(graph["inputs"]), 1)
+        self.assertEqual(graph["outputs"], ["relu", "relu"])
+
+    def test_inputs_without_names_of_their_own(self):
+        class Many(nn.Module):
+            def forward(self, *images):
+                return images[0] + images[1]
+
+        graph, _ = self.export(Many(), torch.randn(1, 3, 4, 4), torch.randn(1, 3, 4, 4))
+        self.assertEqual(graph["layers"][0]["inputs"], ["images_0", "images_1"])
+
+    def test_several_inputs(self):
+        class Two(nn.Module):
+            def forward(self, left, right):
+                return left + right
+
+        graph, _ = self.export(Two(), torch.randn(1, 3, 4, 4), torch.randn(1, 3, 4, 4))
+        self.assertEqual([entry["name"] for entry in graph["inputs"]], ["left", "right"])
+        self.assertEqual(graph["layers"][0]["inputs"], ["left", "right"])
 
 
 class ModuleTest(FolderTest):
@@ -824,11 +898,31 @@ class CommandTest(FolderTest):
             (("--torchvision", "no_such_net", "--out", self.folder), "no_such_net"),
             (("--torchvision", "resnet18", "--size", "64", "--out", self.folder), "64x|HxW"),
             (("--torchvision", "resnet18"), "--out"),
+            (("--torchvision", "vit_b_16", "--size", "64x96", "--out", self.folder), "square"),
         ):
             with self.subTest(arguments):
                 code, output = self.run_command(*arguments)
                 self.assertEqual(code, 2)
                 self.assertRegex(output, said)
+
+    def test_wrong_files(self):
+        torch.save({"fc.weight": torch.ones(2)}, self.path("other.pth"))
+        with open(self.path("text.pth"), "w", encoding="utf-8") as file:
+            file.write("no checkpoint")
+        for option, name in (
+            ("--checkpoint", "missing.pth"),
+            ("--checkpoint", "other.pth"),
+            ("--checkpoint", "text.pth"),
+            ("--labels", "missing.txt"),
+        ):
+            with self.subTest(name):
+                code, output = self.run_command(
+                    "--torchvision", "mobilenet_v2", option, self.path(name), "--out",
+                    self.path("bundle"),
+                )  # fmt: skip
+                self.assertEqual(code, 3)
+                self.assertRegex(output, f"error: .*{name}")
+                self.assertFalse(os.path.exists(self.path("bundle")))
 
 
 if __name__ == "__main__":
