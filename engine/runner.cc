@@ -84,6 +84,7 @@ Runner::~Runner() = default;
 Runner::Runner(Runner&&) noexcept = default;
 Runner& Runner::operator=(Runner&&) noexcept = default;
 
+// NOLINTNEXTLINE(performance-unnecessary-value-param): one copy for each layer that matches
 void Runner::add_hook(std::string_view name_or_glob, Hook hook) {
   const internal::PlanState& p = plan_->state();
   bool matched = false;

@@ -194,9 +194,9 @@ bool unfilter(int filter, std::uint8_t* row, const std::uint8_t* above, std::int
 
 // One row of samples to RGB. picture.h says how.
 void to_rgb(const PngFile& png, const std::uint8_t* row, std::int64_t count, std::uint8_t* to) {
-  const int wide = png.depth == 16 ? 2 : 1;
+  const std::int64_t wide = png.depth == 16 ? 2 : 1;
   if (png.colour == kColourType || png.colour == kColourAlphaType) {
-    const int step = png.samples() * wide;
+    const std::int64_t step = png.samples() * wide;
     for (std::int64_t i = 0; i < count; ++i, row += step, to += 3) {
       to[0] = row[0];
       to[1] = row[wide];
@@ -218,7 +218,7 @@ void to_rgb(const PngFile& png, const std::uint8_t* row, std::int64_t count, std
       value = row[i];
     }
     if (png.colour == kPaletteType) {
-      const std::uint8_t* entry = png.palette.data() + value * 3;
+      const std::uint8_t* entry = png.palette.data() + std::ptrdiff_t{3} * value;
       to[0] = entry[0];
       to[1] = entry[1];
       to[2] = entry[2];
