@@ -41,4 +41,13 @@ std::span<const Strategy* const> only_reference() {
   return all;
 }
 
+/// What it returns when a kernel that walks rows of channels stands before the plain one.
+template <typename RowsKernelType, typename ReferenceKernelType>
+std::span<const Strategy* const> rows_and_reference() {
+  static const StrategyOf<RowsKernelType> rows("rows");
+  static const StrategyOf<ReferenceKernelType> reference("reference");
+  static const std::array<const Strategy*, 2> all{&rows, &reference};
+  return all;
+}
+
 }  // namespace leadsman::ops

@@ -1,7 +1,6 @@
 #include "ops/adaptive_avg_pool/adaptive_avg_pool.h"
 
 #include <algorithm>
-#include <array>
 
 #include "core/threads.h"
 #include "leadsman/error.h"
@@ -114,10 +113,7 @@ class AdaptiveAvgPool final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    static const StrategyOf<RowsKernel> rows("rows");
-    static const StrategyOf<ReferenceKernel> reference("reference");
-    static const std::array<const Strategy*, 2> all{&rows, &reference};
-    return all;
+    return rows_and_reference<RowsKernel, ReferenceKernel>();
   }
 };
 

@@ -1,7 +1,6 @@
 #include "ops/avg_pool/avg_pool.h"
 
 #include <algorithm>
-#include <array>
 
 #include "core/threads.h"
 #include "ops/pixel_grid.h"
@@ -120,10 +119,7 @@ class AvgPool final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    static const StrategyOf<RowsKernel> rows("rows");
-    static const StrategyOf<ReferenceKernel> reference("reference");
-    static const std::array<const Strategy*, 2> all{&rows, &reference};
-    return all;
+    return rows_and_reference<RowsKernel, ReferenceKernel>();
   }
 };
 

@@ -1,7 +1,6 @@
 #include "ops/max_pool/max_pool.h"
 
 #include <algorithm>
-#include <array>
 
 #include "core/threads.h"
 #include "ops/pixel_grid.h"
@@ -107,10 +106,7 @@ class MaxPool final : public Operator {
   Cost cost(const OpContext& /*context*/) const override { return {}; }
 
   std::span<const Strategy* const> strategies() const override {
-    static const StrategyOf<RowsKernel> rows("rows");
-    static const StrategyOf<ReferenceKernel> reference("reference");
-    static const std::array<const Strategy*, 2> all{&rows, &reference};
-    return all;
+    return rows_and_reference<RowsKernel, ReferenceKernel>();
   }
 };
 

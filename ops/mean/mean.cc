@@ -1,7 +1,6 @@
 #include "ops/mean/mean.h"
 
 #include <algorithm>
-#include <array>
 
 #include "core/threads.h"
 #include "leadsman/error.h"
@@ -95,10 +94,7 @@ class Mean final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    static const StrategyOf<RowsKernel> rows("rows");
-    static const StrategyOf<ReferenceKernel> reference("reference");
-    static const std::array<const Strategy*, 2> all{&rows, &reference};
-    return all;
+    return rows_and_reference<RowsKernel, ReferenceKernel>();
   }
 };
 

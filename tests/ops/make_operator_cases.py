@@ -406,6 +406,7 @@ def attention():
     one("joint_one_head", 1, 5, 5, 9, 1, True)
     one("separate", 1, 4, 6, 16, 2, False)
     one("scaled", 1, 9, 9, 8, 4, True, 0.3)
+    one("large_scores", 2, 9, 9, 8, 4, True, 1.5)  # softmax nearly picks one token
     return [whole, weights]
 
 
