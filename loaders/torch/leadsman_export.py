@@ -429,9 +429,11 @@ def _trace(module, inputs):
 # ---------------------------------------------------------------------------------------------
 # Values between layers
 #
-# Sizes have one-letter names: an image is "NCHW", tokens "NTC", features "NC". Axes are strings of
-# them: an image whose positions are merged has the axes ("N", "C", "HW"), a row-major reading. An
-# empty string is an axis of size 1 that was put in.
+# Sizes have one-letter names: an image is "NCHW", tokens "NTC", features "NC". The program sees a
+# wire through axes, each a row of factors: whole axes of the wire or parts that one was split into.
+# Written as strings, an image whose positions are merged has the axes ("N", "C", "HW"), a row-major
+# reading; channels split into two groups and turned are ("N", "C1C0", "H", "W"). An empty string
+# is an axis of size 1 that was put in.
 
 
 @dataclasses.dataclass(eq=False)
@@ -448,18 +450,94 @@ class Wire:
         return dict(zip(self.sizes, self.tensor.shape))
 
 
+@dataclasses.dataclass(frozen=True)
+class Factor:
+    """An axis of a wire, or one part of it. Parts are row-major: the last varies fastest."""
+
+    letter: str
+    parts: tuple = ()  # the sizes of all parts; empty for the whole axis
+    index: int = 0
+
+    def size(self, sizes):
+        return self.parts[self.index] if self.parts else sizes[self.letter]
+
+    def __str__(self):
+        return self.letter + (str(self.index) if self.parts else "")
+
+
+def _whole(axes):
+    """Factors of axes that are written as letters: ("N", "HW", "C") or "NTC"."""
+    return tuple(tuple(Factor(letter) for letter in axis) for axis in axes)
+
+
 @dataclasses.dataclass(eq=False)
 class View:
-    """A wire as the traced program sees it."""
+    """A wire as the traced program sees it; what it cuts out and does to it comes as layers when
+    an operation needs it (`Site.settled`)."""
 
     wire: Wire
-    axes: tuple
+    factors: tuple  # for each axis, its factors
+    chosen: tuple = ()  # (factor, index): parts of which the program took one
+    scaled: float = 1.0  # a number that multiplies it
+    normalized: float = 0.0  # its channels are divided by their L2 norm, at least this
+    site: "Site" = None  # where it was cut out or scaled
+
+    def __post_init__(self):
+        self.factors, self.chosen = _merged(self.factors, self.chosen)
+
+    @property
+    def axes(self):
+        return tuple("".join(map(str, axis)) for axis in self.factors)
+
+    def is_all(self):
+        return not self.chosen and self.scaled == 1.0 and not self.normalized
 
     def is_plain(self):
-        return self.axes == tuple(self.wire.sizes)
+        return self.is_all() and self.axes == tuple(self.wire.sizes)
 
     def axis(self, dim):
-        return dim % len(self.axes)
+        return dim % len(self.factors)
+
+    def sizes(self):
+        known = self.wire.size_of()
+        return [math.prod(f.size(known) for f in axis) for axis in self.factors]
+
+    def tensor(self):
+        """What the program sees, of all of a wire."""
+        known = self.wire.size_of()
+        seen = [f for axis in self.factors for f in axis]
+        stored = sorted(seen, key=lambda f: (self.wire.sizes.index(f.letter), f.index))
+        spread = self.wire.tensor.reshape([f.size(known) for f in stored])
+        return spread.permute([stored.index(f) for f in seen]).reshape(self.sizes())
+
+    def with_factors(self, factors, **fields):
+        return dataclasses.replace(self, factors=tuple(map(tuple, factors)), **fields)
+
+
+def _replaced(axes, chosen, replacement):
+    """Every factor taken through `replacement`, which gives a list of factors for one."""
+    axes = tuple(tuple(new for f in axis for new in replacement(f)) for axis in axes)
+    return axes, tuple((replacement(f)[0], index) for f, index in chosen)
+
+
+def _merged(axes, chosen):
+    """Parts that stand beside each other as they were before a split are one factor again."""
+    for axis in axes:
+        for first, second in zip(axis, axis[1:]):
+            if first.letter == second.letter and second.index == first.index + 1:
+                parts, i = first.parts, first.index
+                joined = (*parts[:i], parts[i] * parts[i + 1], *parts[i + 2 :])
+
+                def replacement(f):
+                    if f.letter != first.letter:
+                        return [f]
+                    if f == second:
+                        return []
+                    parts_left = joined if len(joined) > 1 else ()
+                    return [Factor(f.letter, parts_left, f.index - (f.index > i))]
+
+                return _merged(*_replaced(axes, chosen, replacement))
+    return axes, chosen
 
 
 @dataclasses.dataclass(eq=False)
@@ -483,11 +561,32 @@ class Refused:
     advice: str
 
 
+@dataclasses.dataclass(eq=False)
+class Scores:
+    """q k^T on its way to a softmax and a product with v, which make it attention."""
+
+    query: View
+    key: View
+    depth: Factor  # the channels of a head, which the product sums over
+    axes: tuple  # each "batch", "query" or "key" with the factors there: (kind, factors)
+    scale: float
+    bias: Constant = None  # added to the scores
+    head_scale: Constant = None  # multiplies the scores of each head
+    weighted: bool = False  # after the softmax
+
+
 # Views that a layer of their own produces: (sizes, axes) -> operator, sizes of its output.
 FORMS = {
     ("NCHW", ("N", "HW", "C")): ("image_to_tokens", "NTC"),
     ("NCHW", ("N", "CHW")): ("flatten", "NC"),
     ("NTC", ("N", "TC")): ("flatten", "NC"),
+    ("NTC", ("N", "C", "T")): ("transpose", "NTC"),
+    ("NTC", ("N", "C", "T0", "T1")): ("tokens_to_image", "NCHW"),
+    ("NTC", ("N", "T0", "T1", "C")): ("tokens_to_image", "NHWC"),
+    ("NC", ("N", "C", "", "")): ("features_to_image", "NCHW"),
+    ("NCHW", ("N", "C1C0", "H", "W")): ("channel_shuffle", "NCHW"),
+    ("NCHW", ("N", "H0", "W0", "W1H1C")): ("space_to_depth", "NHWC"),
+    ("NCHW", ("N", "H0W0", "W1H1C")): ("space_to_depth", "NTC"),
 }
 
 # Attributes equal to these are left out of the graph.
@@ -496,33 +595,64 @@ ATTRIBUTE_DEFAULTS = {
     "max_pool": {"padding": [0] * 4, "dilation": [1, 1], "ceil_mode": False},
     "avg_pool": {"padding": [0] * 4, "ceil_mode": False, "count_padding": True},
     "mean": {"keep": False},
+    "scale": {"factor": 1.0, "offset": 0.0},
+    "slice": {"axis": "channels", "start": 0, "count": 0},
+    "attention": {"scale": 0.0},
+    "window_attention": {"shift": [0, 0], "arrangement": "window", "scale": 0.0, "cosine": False},
+    "space_to_depth": {"block": [2, 2], "order": "columns"},
 }
 
 
 def _regrouped(view, shape):
-    """The axes of `view` reshaped to `shape`, or None when an axis would have to be split."""
+    """`view` reshaped to `shape`: axes are merged, and split where the sizes ask for it; None when
+    the sizes do not fit or the pictures of a batch would be mixed."""
     sizes = view.wire.size_of()
-    letters = list("".join(view.axes))
-    axes = []
+    rest = [f for axis in view.factors for f in axis]
+    axes, chosen = [], view.chosen
     for wanted in shape:
-        axis, product = "", 1
-        while letters and product * sizes[letters[0]] <= wanted and (product < wanted or not axis):
-            product *= sizes[letters[0]]
-            axis += letters.pop(0)
+        axis, product = [], 1
+        while rest:
+            size = rest[0].size(sizes)
+            if product * size <= wanted and (product < wanted or not axis):
+                product *= size
+                axis.append(rest.pop(0))
+                continue
+            if product == wanted:
+                break
+            outer = wanted // product
+            if wanted % product or size % outer or rest[0].letter == "N":
+                return None
+            split = rest[0]
+            parts, i = split.parts or (size,), split.index
+            finer = (*parts[:i], outer, size // outer, *parts[i + 1 :])
+
+            def replacement(f):
+                if f.letter != split.letter:
+                    return [f]
+                if f == split:
+                    return [Factor(f.letter, finer, i), Factor(f.letter, finer, i + 1)]
+                return [Factor(f.letter, finer, f.index + (f.index > i))]
+
+            (*axes, axis, rest), chosen = _replaced((*axes, axis, rest), chosen, replacement)
+            axis, rest = list(axis), list(rest)
         if product != wanted:
             return None
         axes.append(axis)
-    if any(sizes[letter] != 1 for letter in letters):
+    if any(f.size(sizes) != 1 for f in rest):
         return None
-    axes[-1] += "".join(letters)
-    return tuple(axes)
+    if rest:
+        axes[-1] = [*axes[-1], *rest]
+    return view.with_factors(axes, chosen=chosen)
 
 
-def _in_wire_order(tensor, axes, sizes, order):
-    """The tensor that the program sees as `axes`, spread to single sizes in `order`."""
-    spread = "".join(axes)
-    tensor = tensor.reshape([sizes[letter] for letter in spread])
-    return tensor.permute([spread.index(letter) for letter in order]).contiguous()
+def _in_wire_order(tensor, factors, sizes, order):
+    """The tensor that the program sees as `factors`, spread and put in the wire's order."""
+    seen = [f for axis in factors for f in axis]
+    wanted = sorted(seen, key=lambda f: (order.index(f.letter), f.index))
+    tensor = tensor.reshape([f.size(sizes) for f in seen])
+    tensor = tensor.permute([seen.index(f) for f in wanted])
+    of = {letter: [f.size(sizes) for f in wanted if f.letter == letter] for letter in order}
+    return tensor.reshape([math.prod(of[letter]) for letter in order]).contiguous()
 
 
 def _storage(tensor):
@@ -547,6 +677,7 @@ class Builder:
             self.checkpoint_names.setdefault(id(tensor), name)
         self.converted = {}  # node -> View, Constant, Python value of Sizes, tuple of these
         self.inputs, self.layers, self.outputs = [], [], []
+        self.cut = {}  # parts of wires that are layers already
         self.weights, self.reference = {}, {}
         self.needed = self._needed_nodes()
         self.module_paths = {n.target for n in self.needed if n.op == "call_module"}
@@ -619,30 +750,21 @@ class Builder:
             entry["usual_size"] = list(value.shape[2:])
         self.inputs.append(entry)
         self.reference[wire.name] = wire.tensor
-        return View(wire, tuple(sizes))
+        return View(wire, _whole(sizes))
 
     def _output(self, node):
         values = []
         fx.node.map_arg(node.args[0], lambda n: values.append(self.converted[n]))
-        origin = Origin("", type(self.module).__name__)
+        site = Site(self, node)
         for value in values:
-            if isinstance(value, Refused):
-                raise ExportError(value.reason, origin, value.advice)
-            if not isinstance(value, View):
-                raise ExportError(
+            if isinstance(value, (Constant, int, float)):
+                site.fail(
                     "an output of the model does not depend on its input",
-                    origin,
                     "return only tensors that are computed from the input",
                 )
-            if not value.is_plain():
-                raise ExportError(
-                    f"the output {value.wire.name} is returned with its axes rearranged",
-                    origin,
-                    "return images as [N, C, H, W], tokens as [N, T, C], features as [N, C]",
-                )
-            self.outputs.append(value.wire.name)
+            self.outputs.append(site.plain(value, "NCHW", "NTC", "NC", "NhTS").wire.name)
         if not self.outputs:
-            raise ExportError("the model returns no tensor", origin, "return one or more tensors")
+            site.fail("the model returns no tensor", "return one or more tensors")
         return None
 
     def _size(self, node, value):
@@ -654,7 +776,9 @@ class Builder:
         if query in ("shape", "size") and isinstance(arguments[0], View):
             view = arguments[0]
             shape = self.tracer.value(node.args[0]).shape
-            sizes = tuple(n if axis == "C" else Size(n) for n, axis in zip(shape, view.axes))
+            # Of channels, and of axes that the program put in.
+            own = (all(f.letter == "C" for f in axis) for axis in view.factors)
+            sizes = tuple(n if fixed else Size(n) for n, fixed in zip(shape, own))
             dim = node.kwargs.get(
                 "dim", arguments[1] if query == node.target and arguments[1:] else None
             )
@@ -682,7 +806,8 @@ class Builder:
                 if not any(self.position[user] > self.position[node] for user in other.users):
                     continue
                 seen = self.converted.get(other)
-                if not (isinstance(seen, View) and isinstance(after, View)) or (
+                views = (seen, before, after)
+                if not all(isinstance(v, View) and v.is_all() for v in views) or (
                     seen.wire is not before.wire or after.wire.sizes != seen.wire.sizes
                 ):
                     raise ExportError(
@@ -690,7 +815,7 @@ class Builder:
                         self.tracer.origins[node],
                         "use the operation that is not in place",
                     )
-                self.converted[other] = View(after.wire, seen.axes)
+                self.converted[other] = dataclasses.replace(seen, wire=after.wire)
 
     def _drop_unused_layers(self):
         used, kept = set(self.outputs), []
@@ -773,7 +898,7 @@ def _as_constant(value):
 def _depends_on_input(value):
     if isinstance(value, (tuple, list)):
         return any(_depends_on_input(item) for item in value)
-    return isinstance(value, (View, Refused))
+    return isinstance(value, (View, Refused, Scores))
 
 
 class Site:
@@ -781,8 +906,8 @@ class Site:
 
     def __init__(self, builder, node):
         self.builder, self.node = builder, node
-        self.origin = builder.tracer.origins[node]
-        self.value = builder.tracer.value(node)
+        self.origin = builder.tracer.origins.get(node) or Origin("", type(builder.module).__name__)
+        self.value = builder.tracer.values.get(node)
         self.result = builder.tracer.copies.get(node)
         self.is_module = node.op == "call_module"
         self.module = builder.module.get_submodule(node.target) if self.is_module else None
@@ -803,43 +928,67 @@ class Site:
             return value
         if isinstance(value, Refused):
             self.fail(value.reason, value.advice)
+        if isinstance(value, Scores):
+            self.fail(
+                f"{self.operation} is given the product of {value.query.wire.name} and "
+                f"{value.key.wire.name}, which is understood only as attention",
+                "write softmax(q @ k.transpose(-2, -1) * scale, -1) @ v",
+            )
         return self.fail(
             f"{self.operation} is given {type(value).__name__.lower()} where it needs a tensor "
             "computed from the input",
             "no operator takes a constant here; fold it into a neighbouring layer's weights",
         )
 
+    def settled(self, value):
+        """A view of all of a wire: what it cut out or scaled has become layers."""
+        view = self.view(value)
+        if view.is_all():
+            return view
+        key = (view.wire.name, view.factors, view.chosen, view.scaled, view.normalized)
+        if key not in self.builder.cut:
+            self.builder.cut[key] = view.site.cut_out(view)
+        return self.builder.cut[key]
+
     def plain(self, value, *allowed):
         """A view that is a wire as it stands, of one of the allowed kinds ("NCHW", ...)."""
-        view = self.view(value)
-        if not view.is_plain() or view.wire.sizes not in allowed:
+        view = self.settled(value)
+        if not view.is_plain() and view.site:
+            view = view.site.rearranged(view) or view
+        if not view.is_plain() or (allowed and view.wire.sizes not in allowed):
             names = {
                 "NCHW": "an image [N, C, H, W]",
                 "NTC": "tokens [N, T, C]",
                 "NC": "features [N, C]",
             }
-            shape = [tuple(axis) if len(axis) != 1 else axis for axis in view.axes]
+            wanted = [names[a] for a in allowed or names if a in names]
             self.fail(
-                f"{self.operation} needs {' or '.join(names[a] for a in allowed)}, but gets "
-                f"{view.wire.name} with the axes {shape}",
+                f"{self.operation} needs {' or '.join(wanted)}, but gets {self.shown(view)}",
                 "rearrange the tensor before this operation",
             )
         return view
 
+    def shown(self, view):
+        parts = {f: f.size(view.wire.size_of()) for axis in view.factors for f in axis if f.parts}
+        sizes = ", ".join(f"{f} = {n}" for f, n in parts.items())
+        return (
+            f"{view.wire.name} with the axes [{', '.join(axis or '1' for axis in view.axes)}]"
+            + (f" ({sizes})" if sizes else "")
+        )
+
     def last_is_channels(self, value):
-        view = self.view(value)
+        view = self.settled(value)
         if view.axes[-1] != "C":
-            self.fail(
-                f"{self.operation} runs along an axis of {view.wire.name} other than its channels",
-                "bring the channels to the last axis first",
-            )
+            view = self.plain(view)
         return view
 
     def same_form(self, values):
-        views = [self.view(value) for value in values]
+        views = [self.settled(value) for value in values]
+        if len({(view.factors, view.wire.sizes) for view in views}) > 1:
+            views = [self.plain(view) for view in views]
         first = views[0]
         for view in views[1:]:
-            if (view.axes, view.wire.sizes) != (first.axes, first.wire.sizes):
+            if view.wire.sizes != first.wire.sizes:
                 self.fail(
                     f"{self.operation} joins {first.wire.name} and {view.wire.name} of other axes",
                     "bring both to the same order of axes",
@@ -879,24 +1028,29 @@ class Site:
 
     def layer(
         self, operator_name, inputs, attributes=None, weights=None, *,
-        sizes=None, axes=None, short=None, name=None, tensor=None, size_of=None, **wire_fields,
+        sizes=None, factors=None, short=None, name=None, tensor=None, result=None, size_of=None,
+        **wire_fields,
     ):  # fmt: skip
         """Emits a layer and returns the view of its output that the program sees.
 
-        By default the output has the first input's sizes and axes. `sizes` names those of another
-        kind. The reference is the node's value, put back into the wire's order, unless `tensor` is
-        given in that order; `size_of` overrides sizes that changed within merged axes.
+        By default the output has the first input's sizes and factors. `sizes` names those of
+        another kind. The reference is `result`, by default the node's value, put back into the
+        wire's order, unless `tensor` is given in that order; `size_of` overrides sizes that changed
+        within merged axes.
         """
         first = inputs[0]
-        axes = axes or (tuple(sizes) if sizes else first.axes)
+        factors = factors or (_whole(sizes) if sizes else first.factors)
         sizes = sizes or first.wire.sizes
         name = self.builder.unique_name(
             name or self.name(short or self.short_name()), not self.is_module
         )
         if tensor is None:
+            result = self.result if result is None else result
             known = {**first.wire.size_of(), **(size_of or {})}
-            known.update((a, n) for a, n in zip(axes, self.result.shape) if len(a) == 1)
-            tensor = _in_wire_order(self.result, axes, known, sizes)
+            for axis, n in zip(factors, result.shape):
+                if len(axis) == 1 and not axis[0].parts:
+                    known[axis[0].letter] = n
+            tensor = _in_wire_order(result, factors, known, sizes)
         if sizes == first.wire.sizes == "NTC":
             wire_fields = {
                 "patches": first.wire.patches,
@@ -907,37 +1061,123 @@ class Site:
         self.builder.add_layer(
             self, name, operator_name, inputs, attributes or {}, weights or {}, wire
         )
-        return View(wire, axes)
+        return View(wire, factors, site=self)
 
-    def see(self, view, axes):
-        """The same wire with other axes; a layer of its own when an operator produces that form."""
-        form = FORMS.get((view.wire.sizes, axes))
-        if not form:
-            return View(view.wire, axes)
-        operator_name, sizes = form
-        fields = {"patches": view.wire} if operator_name == "image_to_tokens" else {}
-        plain = View(view.wire, tuple(view.wire.sizes))
+    def see(self, view, factors, **fields):
+        """The same wire with other factors; a layer at once when an operator produces that form,
+        except for turned tokens, which may turn back."""
+        view = view.with_factors(factors, site=self, **fields)
+        if not view.is_all() or view.axes == ("N", "C", "T"):
+            return view
+        return self.rearranged(view) or view
+
+    def rearranged(self, view):
+        """The layer that produces what this view, of all of a wire, shows; None without one."""
+        operator_name, order = FORMS.get((view.wire.sizes, view.axes), (None, None))
+        if not operator_name:
+            return None
+        inputs = [View(view.wire, _whole(view.wire.sizes))]
+        parts = {f.letter: f.parts for axis in view.factors for f in axis if f.parts}
+        attributes, fields, factors = {}, {}, _whole(order)
+        sizes = "NCHW" if order == "NHWC" else order
+        if operator_name == "image_to_tokens":
+            fields = {"patches": view.wire}
+        elif operator_name == "transpose":
+            fields = {"patches": None, "prefix": 0}
+        elif operator_name == "channel_shuffle":
+            attributes = {"groups": parts["C"][0]}
+        elif operator_name == "space_to_depth":
+            attributes = {"block": [parts["H"][1], parts["W"][1]]}
+        elif operator_name == "tokens_to_image":
+            patches = view.wire.patches
+            if not patches or view.wire.prefix or parts["T"] != patches.tensor.shape[2:]:
+                return None
+            inputs.append(View(patches, _whole("NCHW")))
         return self.layer(
-            operator_name, [plain], sizes=sizes, short=operator_name, tensor=self.result, **fields
-        )
+            operator_name, inputs, attributes, sizes=sizes, factors=factors, short=operator_name,
+            result=view.tensor(), **fields,
+        )  # fmt: skip
+
+    def cut_out(self, view):
+        """Layers for the channels that a view of this site's took, normalised and scaled."""
+        wire, factors = view.wire, view.factors
+        seen = View(wire, _whole(wire.sizes))
+        if view.chosen:
+            (factor, index), *more = view.chosen
+            if more or factor.letter != "C" or factor.index != 0:
+                self.fail(
+                    f"a part of {wire.name} that is not a run of its channels: "
+                    f"{', '.join(f'{f} = {i}' for f, i in view.chosen)}",
+                    "take channels out with chunk, split or a slice along the channel axis",
+                )
+            count = math.prod(factor.parts[1:])
+            factors = _channel_factors(factors, factor)
+            if factors is None:
+                self.fail(
+                    f"one channel of {wire.name} without an axis for channels",
+                    "keep the axis: x[:, c:c + 1]",
+                )
+            axis = wire.sizes.index("C")
+            seen = self.layer(
+                "slice", [seen], {"start": index * count, "count": count},
+                factors=_whole(wire.sizes), short="slice",
+                tensor=wire.tensor.narrow(axis, index * count, count).contiguous(),
+            )  # fmt: skip
+        if view.normalized:
+            if any(f.letter == "C" and f.parts for axis in factors for f in axis):
+                self.fail(
+                    f"heads of {wire.name} are normalised outside of attention",
+                    "normalise q and k, and multiply them as attention does",
+                )
+            axis = wire.sizes.index("C")
+            seen = self.layer(
+                "l2_normalize", [seen], {"eps": view.normalized}, short="normalize",
+                tensor=F.normalize(seen.wire.tensor, dim=axis, eps=view.normalized),
+            )  # fmt: skip
+        if view.scaled != 1.0:
+            seen = self.layer(
+                "scale", [seen], {"factor": view.scaled}, short="scale",
+                tensor=seen.wire.tensor * view.scaled,
+            )  # fmt: skip
+        return View(seen.wire, factors, site=self)
+
+
+def _channel_factors(factors, taken):
+    """The factors of a view after the part `taken` of the channels, the first, is a wire's own."""
+    if taken.parts:
+        parts = taken.parts[1:]
+
+        def replacement(f):
+            if f.letter != "C":
+                return [f]
+            return [Factor("C", parts if len(parts) > 1 else (), f.index - 1)]
+
+        return _replaced(factors, (), replacement)[0]
+    if () not in factors:
+        return None
+    place = factors.index(())
+    return (*factors[:place], (Factor("C"),), *factors[place + 1 :])
 
 
 # ---------------------------------------------------------------------------------------------
 # Handlers: tables
 
 MODULES = {}  # module type, or its full name where importing it is optional -> handler
-FUNCTIONS = {}  # function -> handler
+FUNCTIONS = {}  # function, or its full name -> handler
 METHODS = {}  # name of a tensor's method -> handler
 
 
 def handles(*keys):
-    """Registers a handler for module types, functions and names: "relu" is a tensor's method,
-    a name with dots is a module type that need not be importable."""
+    """Registers a handler for module types, functions and names: "relu" is a tensor's method;
+    a name with dots is a function or a module type that need not be importable."""
 
     def register(handler):
         for key in keys:
-            is_module = isinstance(key, type) or (isinstance(key, str) and "." in key)
-            table = MODULES if is_module else METHODS if isinstance(key, str) else FUNCTIONS
+            name = key.rpartition(".") if isinstance(key, str) else ("", "", "")
+            if isinstance(key, type) or (name[0] and name[2][0].isupper()):
+                table = MODULES
+            else:
+                table = METHODS if isinstance(key, str) and not name[0] else FUNCTIONS
             table[key] = handler
         return handler
 
@@ -965,6 +1205,9 @@ def find_handler(site):
             "replace it by modules that have one (loaders/GRAPH_FORMAT.md lists the operators)",
         )
     handler = {"call_function": FUNCTIONS, "call_method": METHODS}[site.node.op].get(target)
+    if handler is None and site.node.op == "call_function":
+        full_name = f"{getattr(target, '__module__', '')}.{getattr(target, '__qualname__', '')}"
+        handler = FUNCTIONS.get(full_name)
     if handler is None:
         kind = {"call_function": "function", "call_method": "method"}[site.node.op]
         where = getattr(target, "__module__", None)
@@ -1010,11 +1253,6 @@ def _conv2d_module(site, m, input):
 @handles(F.linear, torch._C._nn.linear)
 def _linear(site, input, weight, bias=None):
     view = site.last_is_channels(input)
-    if view.wire.sizes not in ("NTC", "NC"):
-        site.fail(
-            f"{site.operation} on the image {view.wire.name}",
-            "use a 1x1 convolution, or turn the image into tokens first",
-        )
     return site.layer("linear", [view], {}, {"weight": weight, "bias": bias})
 
 
@@ -1037,7 +1275,9 @@ def _batch_norm(
             f"{site.operation} uses the statistics of the batch",
             "track running statistics and normalise by them",
         )
-    view = site.plain(input, "NCHW", "NC")
+    view = site.settled(input)
+    if len(view.axes) < 2 or view.axes[1] != "C":
+        view = site.plain(view, "NCHW", "NC")
     weights = {"weight": weight, "bias": bias, "mean": running_mean, "variance": running_var}
     return site.layer("batch_norm", [view], {"eps": float(eps)}, weights)
 
@@ -1063,6 +1303,40 @@ def _layer_norm_module(site, m, input):
     return _layer_norm(site, input, m.normalized_shape, m.weight, getattr(m, "bias", None), m.eps)
 
 
+@handles(F.group_norm, torch.group_norm)
+def _group_norm(site, input, num_groups, weight=None, bias=None, eps=1e-5, cudnn_enabled=True):
+    attributes = {"groups": num_groups, "eps": float(eps)}
+    weights = {"weight": weight, "bias": bias}
+    return site.layer("group_norm", [site.plain(input, "NCHW")], attributes, weights)
+
+
+@handles(nn.GroupNorm)
+def _group_norm_module(site, m, input):
+    return _group_norm(site, input, m.num_groups, m.weight, m.bias, m.eps)
+
+
+@handles(F.local_response_norm)
+def _local_response_norm(site, input, size, alpha=1e-4, beta=0.75, k=1.0):
+    attributes = {"size": size, "alpha": float(alpha), "beta": float(beta), "k": float(k)}
+    return site.layer("local_response_norm", [site.plain(input, "NCHW")], attributes)
+
+
+@handles(nn.LocalResponseNorm)
+def _local_response_norm_module(site, m, input):
+    return _local_response_norm(site, input, m.size, m.alpha, m.beta, m.k)
+
+
+@handles(F.normalize)
+def _normalize(site, input, p=2.0, dim=1, eps=1e-12, out=None):
+    view = site.view(input)
+    along = view.factors[view.axis(dim)]
+    if p != 2 or [f.letter for f in along] != ["C"]:
+        site.fail(f"normalize with p={p} along axis {dim}", "divide by the L2 norm of the channels")
+    if along[0].parts or view.chosen:  # of heads: the product of queries and keys takes it in
+        return dataclasses.replace(view, normalized=float(eps), site=site)
+    return site.layer("l2_normalize", [site.settled(view)], {"eps": float(eps)}, short="normalize")
+
+
 # ---------------------------------------------------------------------------------------------
 # Handlers: activations
 
@@ -1071,6 +1345,7 @@ ACTIVATIONS = {
     "relu": (nn.ReLU, F.relu, F.relu_, torch.relu, torch.relu_, "relu", "relu_"),
     "relu6": (nn.ReLU6, F.relu6),
     "silu": (nn.SiLU, F.silu),
+    "mish": (nn.Mish, F.mish),
     "sigmoid": (nn.Sigmoid, torch.sigmoid, torch.sigmoid_, F.sigmoid, "sigmoid", "sigmoid_"),
     "hard_sigmoid": (nn.Hardsigmoid, F.hardsigmoid),
     "hard_swish": (nn.Hardswish, F.hardswish),
@@ -1079,7 +1354,7 @@ ACTIVATIONS = {
 
 
 def _activation(site, input, kind, **attributes):
-    return site.layer("activation", [site.view(input)], {"kind": kind, **attributes})
+    return site.layer("activation", [site.settled(input)], {"kind": kind, **attributes})
 
 
 def _register_activation(kind, keys):
@@ -1118,10 +1393,12 @@ def _gelu_module(site, m, input):
 
 @handles(F.softmax, torch.softmax, "softmax")
 def _softmax(site, input, dim=None, _stacklevel=3, dtype=None):
-    view = site.view(input)
+    if isinstance(input, Scores):
+        return _weighted(site, input, dim)
+    view = site.settled(input)
     if dim is None:  # torch's own choice when none is given
         dim = 0 if len(view.axes) in (0, 1, 3) else 1
-    if view.wire.sizes not in ("NTC", "NC") or view.axes[view.axis(dim)] != "C":
+    if view.axes[view.axis(dim)] != "C":
         site.fail(
             f"softmax along axis {dim} of {view.wire.name}",
             "softmax runs over the channels of tokens or features",
@@ -1140,12 +1417,18 @@ def _softmax_module(site, m, input):
 
 @handles(operator.add, operator.iadd, torch.add, "add", "add_")
 def _add(site, input, other, *, alpha=1):
+    if not _depends_on_input(input):
+        input, other = other, input
+        if alpha != 1:
+            site.fail(f"add with alpha={alpha}", "scale in a layer of its own")
     if alpha != 1:
-        site.fail(f"add with alpha={alpha}", "scale in a layer of its own")
-    if isinstance(other, Constant) and isinstance(input, View):
-        return _position_embed(site, input, other)
-    if isinstance(input, Constant) and isinstance(other, View):
-        return _position_embed(site, other, input)
+        other = _mul(site, other, alpha)
+    if isinstance(input, Scores):
+        return _scores_bias(site, input, other)
+    if isinstance(other, Constant):
+        return _add_constant(site, input, other)
+    if isinstance(other, (int, float)):
+        return site.layer("scale", [site.settled(input)], {"offset": float(other)})
     views = site.same_form([input, other])
     if views[0].wire.tensor.shape != views[1].wire.tensor.shape:
         site.fail(
@@ -1155,35 +1438,126 @@ def _add(site, input, other, *, alpha=1):
     return site.layer("add", views)
 
 
+def _add_constant(site, input, constant):
+    view = site.settled(input)
+    if view.wire.sizes == "NTC" and constant.tensor.shape[-2:] == view.wire.tensor.shape[-2:]:
+        return _position_embed(site, view, constant)
+    weight = _by_channel(site, view, constant)
+    if not isinstance(weight, Constant):
+        return site.layer("scale", [view], {"offset": weight})
+    return site.layer("scale", [view], {}, {"bias": weight})
+
+
+def _by_channel(site, view, constant):
+    """A constant that is broadcast over a view: one number, or one for each channel."""
+    tensor = constant.tensor.detach()
+    if tensor.numel() == 1:
+        return float(tensor)
+    shape = [1] * (len(view.axes) - tensor.dim()) + list(tensor.shape)
+    channels = [n for n, axis in zip(shape, view.axes) if axis == "C"]
+    if len(shape) != len(view.axes) or channels != [tensor.numel()]:
+        site.fail(
+            f"{site.operation} joins {site.shown(view)} and a constant of shape "
+            f"{list(tensor.shape)}",
+            "constants can be numbers, or have one value for each channel",
+        )
+    for name in constant.sources:
+        source = site.builder.checkpoint.get(name)
+        if source is not None and torch.equal(source.detach().flatten(), tensor.flatten()):
+            return Constant(source, (name,), constant.sized)
+    return _computed(constant, tensor.flatten())
+
+
+@handles(operator.sub, operator.isub, torch.sub, "sub", "sub_")
+def _sub(site, input, other, *, alpha=1):
+    if isinstance(other, Constant):
+        return _add(site, input, _computed(other, other.tensor * -alpha))
+    return _add(site, input, _mul(site, other, -alpha))
+
+
+@handles(operator.neg, torch.neg, "neg")
+def _neg(site, input):
+    return _mul(site, input, -1)
+
+
+def _computed(constant, tensor):
+    return dataclasses.replace(constant, tensor=tensor)
+
+
 @handles(operator.mul, operator.imul, torch.mul, torch.multiply, "mul", "mul_", "multiply")
 def _mul(site, input, other):
-    views = site.same_form([input, other])
+    if not _depends_on_input(input):
+        input, other = other, input
+    if not _depends_on_input(input):  # two numbers
+        return input * other
+    if isinstance(other, Constant) and other.tensor.numel() == 1:
+        other = float(other.tensor)
+    if isinstance(input, Scores):
+        return _scores_scaled(site, input, other)
+    view = site.view(input)
+    if isinstance(other, (int, float)):
+        heads = any(f.letter == "C" and f.parts for axis in view.factors for f in axis)
+        if view.chosen or heads:  # the product of queries and keys takes it in
+            return dataclasses.replace(view, scaled=view.scaled * float(other), site=site)
+        return site.layer("scale", [site.settled(view)], {"factor": float(other)}, short="mul")
+    if isinstance(other, Constant):
+        view = site.settled(view)
+        return site.layer("scale", [view], {}, {"weight": _by_channel(site, view, other)})
+    views = site.same_form([view, other])
     shapes = [list(view.wire.tensor.shape) for view in views]
-    factors = [
-        view.wire.sizes == "NCHW" and shape[2:] == [1, 1] for view, shape in zip(views, shapes)
-    ]
     if shapes[0] != shapes[1]:
-        if factors[0]:
+        if _is_factor(views[1], views[0]):
             views.reverse()
-        elif not factors[1]:
+        elif not _is_factor(views[0], views[1]):
             site.fail(
                 f"{site.operation} multiplies shapes {shapes[0]} and {shapes[1]}",
-                "operands need one shape, or are an image and its channels' factors [N, C, 1, 1]",
+                "operands need one shape, or one has the size 1 over all positions or channels",
             )
     return site.layer("mul", views)
 
 
+def _is_factor(view, factor):
+    """Whether `factor` has one value for each channel of a picture, or for each position."""
+    n, *rest = view.wire.tensor.shape
+    shape = list(factor.wire.tensor.shape)
+    if view.wire.sizes == "NCHW":
+        return shape in ([n, rest[0], 1, 1], [n, 1, *rest[1:]])
+    return view.wire.sizes == "NTC" and shape == [n, 1, rest[1]]
+
+
+@handles(operator.truediv, operator.itruediv, torch.div, torch.true_divide, "div", "div_")
+def _div(site, input, other):
+    if isinstance(other, Constant):
+        return _mul(site, input, _computed(other, other.tensor.reciprocal()))
+    if not isinstance(other, (int, float)):
+        site.fail(
+            f"{site.operation} divides by a tensor computed from the input",
+            "divide by numbers or weights; F.normalize divides by an L2 norm",
+        )
+    return _mul(site, input, 1 / other)
+
+
+@handles("expand", "expand_as")
+def _expand(site, input, *_):
+    """What is repeated is only a factor: products repeat it by themselves."""
+    products = {operator.mul, operator.imul, torch.mul, "mul", "mul_"}
+    if any(user.target not in products for user in site.node.users):
+        site.fail(
+            f"{site.operation} repeats {site.view(input).wire.name} along an axis",
+            "only factors of a product are repeated",
+        )
+    return site.view(input)
+
+
 def _position_embed(site, tokens, positions):
     """tokens + parameter [1, T, C]; the parameter is fitted to other grids of patches."""
-    view = site.view(tokens)
-    shape = list(view.wire.tensor.shape)
-    if view.wire.sizes != "NTC" or list(positions.tensor.shape[-2:]) != shape[1:]:
+    view = site.plain(tokens, "NTC")
+    if positions.tensor.numel() != math.prod(view.wire.tensor.shape[1:]):
         site.fail(
             f"{site.operation} adds a constant of shape {list(positions.tensor.shape)} to "
             f"{view.wire.name}",
-            "only positions [1, T, C] can be added to tokens; fold other constants into a bias",
+            "positions are the same for every picture: [1, T, C]",
         )
-    site.plain(tokens, "NTC")
     if positions.tensor.dim() == 2:  # the checkpoint has [T, C], the format wants [1, T, C]
         positions = Constant(positions.tensor.unsqueeze(0), positions.sources, positions.sized)
     patches, prefix = view.wire.patches, view.wire.prefix
@@ -1195,7 +1569,7 @@ def _position_embed(site, tokens, positions):
                 f"positions of a grid of {height} x {width} would be read as a square grid",
                 "train with a square grid, or with one whose count of patches has no whole root",
             )
-        inputs.append(View(patches, tuple("NCHW")))
+        inputs.append(View(patches, _whole("NCHW")))
     else:
         prefix = 0
     return site.layer(
@@ -1207,8 +1581,12 @@ def _position_embed(site, tokens, positions):
 @handles(torch.cat, getattr(torch, "concat", torch.cat))
 def _concat(site, tensors, dim=0):
     parts = list(tensors)
-    if len(parts) == 2 and isinstance(parts[0], Constant) and isinstance(parts[1], View):
-        return _class_token(site, parts[0], parts[1], dim)
+    if len(parts) > 1 and isinstance(parts[-1], View):
+        tokens = [part for part in parts[:-1] if isinstance(part, Constant)]
+        if len(tokens) == len(parts) - 1:
+            for token in reversed(tokens):
+                parts[-1] = _class_token(site, token, parts[-1], dim)
+            return parts[-1]
     views = site.same_form(parts)
     if views[0].axes[views[0].axis(dim)] != "C":
         site.fail(f"{site.operation} along axis {dim}", "only channels can be joined")
@@ -1220,6 +1598,7 @@ def _concat(site, tensors, dim=0):
 def _class_token(site, token, tokens, dim):
     """cat([parameter [1, K, C] repeated for the batch, tokens], 1)."""
     view = site.plain(tokens, "NTC")
+    tensor = torch.cat([token.tensor, view.wire.tensor], 1) if token.tensor.dim() == 3 else None
     same = bool((token.tensor == token.tensor[:1]).all())
     if view.axis(dim) != 1 or token.tensor.dim() != 3 or not same:
         site.fail(
@@ -1229,7 +1608,7 @@ def _class_token(site, token, tokens, dim):
     first = Constant(token.tensor[:1], token.sources, token.sized)
     return site.layer(
         "class_token", [view], {}, {"weight": first},
-        short="class_token", prefix=view.wire.prefix + token.tensor.shape[1],
+        short="class_token", prefix=view.wire.prefix + token.tensor.shape[1], tensor=tensor,
     )  # fmt: skip
 
 
@@ -1252,7 +1631,7 @@ def _max_pool(
         "dilation": site.pair(dilation, "dilation"),
         "ceil_mode": bool(ceil_mode),
     }
-    return site.layer("max_pool", [site.plain(input, "NCHW")], attributes)
+    return site.layer("max_pool", [site.plain(input, "NCHW")], attributes, sizes="NCHW")
 
 
 @handles(nn.MaxPool2d)
@@ -1281,7 +1660,7 @@ def _avg_pool(
         "ceil_mode": bool(ceil_mode),
         "count_padding": bool(count_include_pad),
     }
-    return site.layer("avg_pool", [view], attributes)
+    return site.layer("avg_pool", [view], attributes, sizes="NCHW")
 
 
 @handles(nn.AvgPool2d)
@@ -1306,24 +1685,116 @@ def _adaptive_avg_pool_module(site, m, input):
     return _adaptive_avg_pool(site, input, m.output_size)
 
 
-@handles(torch.mean, "mean")
-def _mean(site, input, dim=None, keepdim=False, *, dtype=None):
-    view = site.view(input)
+@handles(nn.AdaptiveAvgPool1d)
+def _adaptive_avg_pool_1d_module(site, m, input):
+    if m.output_size not in (1, (1,)):
+        site.fail("AdaptiveAvgPool1d to more than one value", "average over all positions")
+    return _mean(site, input, -1, keepdim=True)
+
+
+@handles(F.adaptive_max_pool2d)
+def _adaptive_max_pool(site, input, output_size, return_indices=False):
+    if return_indices:
+        site.fail("max pooling that returns indices", "do without the indices")
+    attributes = {"output_size": site.pair(output_size, "output_size")}
+    return site.layer("adaptive_max_pool", [site.plain(input, "NCHW")], attributes, sizes="NCHW")
+
+
+@handles(nn.AdaptiveMaxPool2d)
+def _adaptive_max_pool_module(site, m, input):
+    return _adaptive_max_pool(site, input, m.output_size, m.return_indices)
+
+
+def _over_positions(site, view, dim):
+    """The letters of a reduction over all positions and nothing else."""
     dims = [dim] if isinstance(dim, int) else list(dim or range(len(view.axes)))
     dims = {view.axis(d) for d in dims}
-    averaged = set("".join(view.axes[d] for d in dims))
-    left = tuple(axis for d, axis in enumerate(view.axes) if d not in dims)
-    if averaged != set(view.wire.sizes) - set("NC") or left != ("N", "C") or not averaged:
+    reduced = {f.letter for d in dims for f in view.factors[d]}
+    left = [axis for d, axis in enumerate(view.axes) if d not in dims and axis]
+    if reduced != set(view.wire.sizes) - set("NC") or left != ["N", "C"] or not reduced:
         site.fail(
-            f"mean over the axes {sorted(dims)} of {view.wire.name}",
-            "average over all positions: axes 2 and 3 of an image, axis 1 of tokens",
+            f"{site.short_name()} over the axes {sorted(dims)} of {site.shown(view)}",
+            "reduce over all positions: axes 2 and 3 of an image, axis 1 of tokens",
         )
+    return reduced
+
+
+@handles(torch.mean, "mean")
+def _mean(site, input, dim=None, keepdim=False, *, dtype=None):
+    view = site.settled(input)
+    averaged = _over_positions(site, view, dim)
     if not keepdim:
-        return site.layer("mean", [view], {"keep": False}, sizes="NC")
+        return site.layer("mean", [view], {"keep": False}, sizes="NC", short="mean")
+    fields = {"patches": None, "prefix": 0} if view.wire.sizes == "NTC" else {}
     return site.layer(
-        "mean", [view], {"keep": True}, axes=view.axes, size_of=dict.fromkeys(averaged, 1),
-        **({"patches": None, "prefix": 0} if view.wire.sizes == "NTC" else {}),
-    )  # fmt: skip
+        "mean", [view], {"keep": True}, short="mean", size_of=dict.fromkeys(averaged, 1), **fields
+    )
+
+
+@handles(torch.amax, "amax")
+def _amax(site, input, dim=(), keepdim=False):
+    view = site.plain(input, "NCHW")
+    _over_positions(site, view, dim)
+    tensor = view.wire.tensor.amax((2, 3), keepdim=True)
+    pooled = site.layer(
+        "adaptive_max_pool", [view], {"output_size": [1, 1]}, tensor=tensor, short="amax"
+    )
+    return pooled if keepdim else site.see(pooled, _whole(("N", "CHW")))
+
+
+# ---------------------------------------------------------------------------------------------
+# Handlers: what changes the size of an image
+
+
+@handles(F.pad, getattr(torch._C._nn, "pad", F.pad))
+def _pad(site, input, pad, mode="constant", value=None):
+    amounts = list(site.fixed(pad, "pad"))
+    view = site.settled(input)
+    by_axis = {}
+    for place, axis in enumerate(reversed(view.axes)):
+        before, after = (*amounts[2 * place : 2 * place + 2], 0, 0)[:2]
+        by_axis[axis] = (before, after)
+    top, left = (by_axis.pop(axis, (0, 0)) for axis in "HW")
+    if view.wire.sizes != "NCHW" or any(amount != (0, 0) for amount in by_axis.values()):
+        site.fail(f"{site.operation} of {site.shown(view)} by {amounts}", "pad images at the sides")
+    if top == left == (0, 0):
+        return view
+    if min(*top, *left) < 0:
+        site.fail("a padding that cuts off the sides", "crop images before the model")
+    attributes = {"padding": [top[0], left[0], top[1], left[1]]}
+    if value:
+        attributes["value"] = float(value)
+    if mode != "constant":
+        attributes["mode"] = mode
+    return site.layer("pad", [view], attributes)
+
+
+@handles(nn.ZeroPad2d, nn.ConstantPad2d, nn.ReflectionPad2d, nn.ReplicationPad2d)
+def _pad_module(site, m, input):
+    modes = {nn.ReflectionPad2d: "reflect", nn.ReplicationPad2d: "replicate"}
+    mode = next((word for kind, word in modes.items() if isinstance(m, kind)), "constant")
+    return _pad(site, input, m.padding, mode, getattr(m, "value", None))
+
+
+@handles(F.interpolate)
+def _interpolate(
+    site, input, size=None, scale_factor=None, mode="nearest", align_corners=None,
+    recompute_scale_factor=None, antialias=False,
+):  # fmt: skip
+    factors = scale_factor if isinstance(scale_factor, (tuple, list)) else [scale_factor] * 2
+    whole = size is None and all(f and float(f).is_integer() for f in factors)
+    if not whole or mode not in ("nearest", "bilinear", "bicubic") or align_corners or antialias:
+        site.fail(
+            f"{site.operation} to size {size} by {scale_factor}, {mode}",
+            "enlarge by whole factors: scale_factor=2, align_corners=False",
+        )
+    attributes = {"factor": [int(f) for f in factors], "interpolation": mode}
+    return site.layer("resize", [site.plain(input, "NCHW")], attributes, sizes="NCHW")
+
+
+@handles(nn.Upsample)
+def _upsample_module(site, m, input):
+    return _interpolate(site, input, m.size, m.scale_factor, m.mode, m.align_corners)
 
 
 # ---------------------------------------------------------------------------------------------
@@ -1333,35 +1804,55 @@ def _mean(site, input, dim=None, keepdim=False, *, dtype=None):
 @handles(torch.flatten, torch.reshape, "flatten", "reshape", "view", "unflatten", "view_as")
 def _reshape(site, input, *_, **__):
     view = site.view(input)
-    axes = _regrouped(view, site.result.shape)
-    if axes is None:
+    regrouped = _regrouped(view, site.result.shape)
+    if regrouped is None:
         site.fail(
-            f"{site.operation} splits an axis of {view.wire.name}: from "
-            f"{list(view.wire.tensor.shape)} to {list(site.result.shape)}",
-            "axes can be merged and rearranged, not split",
+            f"{site.operation} from {view.sizes()} to {list(site.result.shape)} mixes axes of "
+            f"{site.shown(view)}",
+            "merge or split whole axes, and keep the pictures of a batch apart",
         )
-    return site.see(view, axes)
+    return site.see(regrouped, regrouped.factors)
 
 
-@handles(nn.Flatten)
+@handles(nn.Flatten, nn.Unflatten)
 def _flatten_module(site, m, input):
     return _reshape(site, input)
 
 
 @handles(torch.permute, "permute")
 def _permute(site, input, *dims):
-    view = site.view(input)
     dims = dims[0] if isinstance(dims[0], (tuple, list)) else dims
-    return site.see(view, tuple(view.axes[view.axis(d)] for d in dims))
+    if isinstance(input, Scores):
+        return dataclasses.replace(input, axes=tuple(input.axes[d] for d in dims))
+    view = site.view(input)
+    return site.see(view, [view.factors[view.axis(d)] for d in dims])
 
 
 @handles(torch.transpose, torch.swapaxes, "transpose", "swapaxes", "swapdims")
 def _transpose(site, input, dim0, dim1):
+    count = len(_axes_of(site, input))
+    order = list(range(count))
+    order[dim0 % count], order[dim1 % count] = dim1 % count, dim0 % count
+    return _permute(site, input, order)
+
+
+def _axes_of(site, value):
+    return value.axes if isinstance(value, Scores) else site.view(value).axes
+
+
+@handles(torch.movedim, "movedim")
+def _movedim(site, input, source, destination):
     view = site.view(input)
-    order = list(range(len(view.axes)))
-    first, second = view.axis(dim0), view.axis(dim1)
-    order[first], order[second] = second, first
+    order = [d for d in range(len(view.axes)) if d != view.axis(source)]
+    order.insert(view.axis(destination), view.axis(source))
     return _permute(site, view, order)
+
+
+@handles(getattr)
+def _attribute(site, input, name):
+    if name in ("mT", "T") and (name == "mT" or len(_axes_of(site, input)) == 2):
+        return _transpose(site, input, -2, -1)
+    return site.fail(f"the attribute {name!r} of a tensor", "use a function of torch instead")
 
 
 @handles(torch.squeeze, "squeeze")
@@ -1375,7 +1866,7 @@ def _squeeze(site, input, dim=None):
 def _unsqueeze(site, input, dim):
     view = site.view(input)
     place = dim % (len(view.axes) + 1)
-    return site.see(view, view.axes[:place] + ("",) + view.axes[place:])
+    return site.see(view, (*view.factors[:place], (), *view.factors[place:]))
 
 
 @handles(operator.getitem)
@@ -1384,34 +1875,137 @@ def _getitem(site, value, index):
         return value[index]
     view = site.view(value)
     parts = list(index) if isinstance(index, tuple) else [index]
-    if Ellipsis in parts:
-        place = parts.index(Ellipsis)
-        parts[place : place + 1] = [slice(None)] * (len(view.axes) - len(parts) + 1)
-    parts += [slice(None)] * (len(view.axes) - len(parts))
-    taken = [d for d, part in enumerate(parts) if part != slice(None)]
-    if len(taken) == 1 and type(parts[taken[0]]) is int:
-        return _select(site, view, taken[0], parts[taken[0]])
-    if not taken:
+    if any(part is Ellipsis for part in parts):
+        place = next(i for i, part in enumerate(parts) if part is Ellipsis)
+        kept = len(view.axes) - sum(part is not None for part in parts) + 1
+        parts[place : place + 1] = [slice(None)] * kept
+    for dim, part in reversed(list(enumerate(parts))):  # from the last: earlier places stay
+        if part is None:
+            below = sum(other is not None for other in parts[:dim])
+            view = view.with_factors((*view.factors[:below], (), *view.factors[below:]), site=site)
+    subsampled = _subsampled(site, view, parts)
+    if subsampled:
+        return subsampled
+    place = 0
+    for part in parts:
+        if part is None:
+            place += 1
+        elif type(part) is int:
+            view = _select(site, view, place, part)
+        elif isinstance(part, slice):
+            view = _sliced(site, view, place, part)
+            place += 1
+        else:
+            site.fail(f"indexing of {site.shown(view)} by {part}", "index by numbers and slices")
+    return view
+
+
+def _subsampled(site, view, parts):
+    """x[:, :, ::2, ::2] is pooling with windows of one pixel."""
+    steps = {
+        axis: part.step
+        for axis, part in zip(view.axes, parts)
+        if isinstance(part, slice) and (part.start, part.stop) == (None, None) and part.step
+    }
+    if not steps or set(steps) - {"H", "W"} or len(parts) != len(view.axes):
+        return None
+    if any(part != slice(None) for axis, part in zip(view.axes, parts) if axis not in steps):
+        return None
+    attributes = {"kernel_size": [1, 1], "stride": [steps.get("H", 1), steps.get("W", 1)]}
+    return site.layer("max_pool", [site.settled(view)], attributes, short="subsample")
+
+
+def _sliced(site, view, dim, part):
+    if part == slice(None):
         return view
-    return site.fail(
-        f"indexing of {view.wire.name} by {index}",
-        "only one token can be taken out: x[:, index]",
-    )
+    axis, size = view.axes[dim], view.sizes()[dim]
+    start, stop, step = part.start or 0, part.stop, part.step or 1
+    site.fixed([start, step], "a slice")
+    if (start, step) == (0, 1) and stop is not None and int(stop) == size:
+        return view
+    if step != 1 or axis not in ("C", "T"):
+        site.fail(
+            f"a slice {start}:{stop}:{step} along axis {dim} of {site.shown(view)}",
+            "channels and tokens can be cut out; images are cropped before the model",
+        )
+    if axis == "C":
+        start, stop, _ = part.indices(size)
+        return _channels(site, view, dim, start, stop - start)
+    view = site.plain(view, "NTC")
+    count = 0 if stop is None else site.fixed(stop, "a slice")
+    if start < 0 or count < 0:
+        site.fail("tokens counted from the end", "count from the start: x[:, 1:]")
+    patches, prefix = view.wire.patches, view.wire.prefix
+    whole = patches is not None and start <= prefix and stop is None
+    return site.layer(
+        "slice", [view], {"axis": "tokens", "start": start, "count": count and count - start},
+        short="slice", patches=patches if whole else None, prefix=prefix - start if whole else 0,
+        tensor=view.wire.tensor[:, start : stop if stop is None else int(stop)].contiguous(),
+    )  # fmt: skip
+
+
+def _channels(site, view, dim, start, count):
+    """A run of channels, axis `dim` of the view."""
+    view = site.settled(view)
+    axis = view.wire.sizes.index("C")
+    tensor = view.wire.tensor.narrow(axis, start, count).contiguous()
+    return site.layer("slice", [view], {"start": start, "count": count}, short="slice", tensor=tensor)
 
 
 @handles(torch.select, "select")
 def _select(site, input, dim, index):
     view = site.view(input)
     dim = view.axis(dim)
-    left = view.axes[:dim] + view.axes[dim + 1 :]
-    if view.wire.sizes != "NTC" or view.axes[dim] != "T" or left != ("N", "C"):
+    axis, size = view.factors[dim], view.sizes()[dim]
+    left = (*view.factors[:dim], *view.factors[dim + 1 :])
+    if view.axes[dim] == "T" and view.wire.sizes == "NTC" and view.is_all():
+        if [str(f) for rest in left for f in rest] != ["N", "C"]:
+            site.fail(f"a token of {site.shown(view)}", "take tokens from [N, T, C]: x[:, index]")
+        if index < 0:
+            site.fail("a token counted from the end", "count from the start: x[:, index]")
+        return site.layer(
+            "select", [view], {"index": index}, sizes="NC", short="select",
+            tensor=view.wire.tensor[:, index].contiguous(),
+        )  # fmt: skip
+    if size == 1 and dim > 0:  # nothing is left out
+        merged = list(view.factors)
+        merged[dim - 1 : dim + 1] = [(*view.factors[dim - 1], *axis)]
+        return site.see(view, merged)
+    if [f.letter for f in axis] != ["C"]:
         site.fail(
-            f"a selection along axis {dim} of {view.wire.name}",
-            "only one token can be taken out: x[:, index]",
+            f"a selection along axis {dim} of {site.shown(view)}",
+            "one token can be taken out, x[:, index], or a group of channels",
         )
-    if index < 0:
-        site.fail("a token counted from the end", "count from the start: x[:, index]")
-    return site.layer("select", [view], {"index": index}, sizes="NC", short="select")
+    chosen = (*view.chosen, (axis[0], index % size))
+    return view.with_factors(left, chosen=chosen, site=site)
+
+
+@handles(torch.unbind, "unbind")
+def _unbind(site, input, dim=0):
+    view = site.view(input)
+    return tuple(_select(site, view, dim, i) for i in range(view.sizes()[view.axis(dim)]))
+
+
+@handles(torch.chunk, torch.split, "chunk", "split", "split_with_sizes")
+def _split(site, input, how, dim=0):
+    """Runs along the channels. Equal ones stay part of the wire: attention reads them there."""
+    view = site.view(input)
+    dim = view.axis(dim)
+    counts = [part.shape[dim] for part in site.value]
+    axis = view.factors[dim]
+    if [f.letter for f in axis] != ["C"]:
+        site.fail(
+            f"{site.operation} along axis {dim} of {site.shown(view)}", "split the channels only"
+        )
+    if len(counts) == 1:
+        return (view,)
+    if len(set(counts)) > 1:
+        starts = [sum(counts[:i]) for i in range(len(counts))]
+        return tuple(_channels(site, view, dim, s, n) for s, n in zip(starts, counts))
+    shape = view.sizes()
+    shape[dim : dim + 1] = [len(counts), counts[0]]
+    parts = _regrouped(view, shape)
+    return tuple(_select(site, parts, dim, i) for i in range(len(counts)))
 
 
 # ---------------------------------------------------------------------------------------------
@@ -1420,18 +2014,19 @@ def _select(site, input, dim, index):
 
 @handles("contiguous", "clone", "detach", "float", "to", "type_as", "requires_grad_", torch.clone)
 def _vanish(site, input, *_, **__):
-    return site.view(input)
+    return input
 
 
 @handles(
     nn.Identity,
     nn.Dropout,
+    nn.Dropout1d,
     nn.Dropout2d,
     nn.AlphaDropout,
     "torchvision.ops.stochastic_depth.StochasticDepth",
 )
 def _identity_module(site, m, input):
-    return site.layer("identity", [site.view(input)])
+    return _identity(site, input)
 
 
 @handles(F.dropout, F.dropout2d, F.alpha_dropout)
@@ -1441,6 +2036,13 @@ def _dropout(site, input, p=0.5, training=True, inplace=False):
             f"{site.operation} drops values at inference too",
             "pass training=self.training",
         )
+    return _identity(site, input)
+
+
+def _identity(site, input):
+    """Layers stay, so that they can be looked at; parts of a wire are none yet."""
+    if isinstance(input, Scores) or (isinstance(input, View) and not input.is_all()):
+        return input
     return site.layer("identity", [site.view(input)])
 
 
@@ -1462,16 +2064,15 @@ def _multihead_attention(
         site.fail("attention with a mask", "the attention operator has no mask")
     if m.bias_k is not None or m.add_zero_attn:
         site.fail("attention with extra keys", "leave add_bias_kv and add_zero_attn out")
-    views = [site.view(v) for v in (query, key, value)]
+    views = [site.settled(v) for v in (query, key, value)]
     axes = ("N", "T", "C") if m.batch_first else ("T", "N", "C")
     for view in views:
         if view.wire.sizes != "NTC" or view.axes != axes:
             site.fail(
-                f"attention with batch_first={m.batch_first} gets {view.wire.name} with the axes "
-                f"{view.axes}",
+                f"attention with batch_first={m.batch_first} gets {site.shown(view)}",
                 "pass tokens [N, T, C] to attention with batch_first=True, or transposed without",
             )
-    tokens = [View(view.wire, tuple("NTC")) for view in views]
+    tokens = [View(view.wire, _whole("NTC")) for view in views]
     path, heads = site.node.target, m.num_heads
 
     def project(name, view, weight, bias):
@@ -1514,7 +2115,7 @@ def _multihead_attention(
             "attention_weights", sources[:2], {"heads": heads},
             name=f"{path}.attention_weights", sizes="NhTS", tensor=scores,
         )  # fmt: skip
-    return View(out.wire, axes), second
+    return View(out.wire, _whole(axes), site=site), second
 
 
 def _attend(q, k, v, heads):
@@ -1536,6 +2137,382 @@ def _require_close(ours, theirs, site, what):
 
 
 # ---------------------------------------------------------------------------------------------
+# Handlers: attention written out, softmax(q k^T) v
+#
+# Products are read through labels of axes, as in Einstein's summation convention. The first gives
+# `Scores`; scaling, biases and the softmax are kept there; the second product makes it a layer.
+
+
+@handles(operator.matmul, torch.matmul, torch.bmm, "matmul", "bmm", "__matmul__")
+def _matmul(site, input, other):
+    if isinstance(other, Constant) and other.tensor.dim() == 2 and isinstance(input, View):
+        return _linear(site, input, _computed(other, other.tensor.t().contiguous()))
+    ranks = [len(_axes_of(site, value)) for value in (input, other)]
+    if ranks[0] != ranks[1]:
+        site.fail("a product of tensors of other ranks", "give both the same axes")
+    batch = "abcdefgh"[: ranks[0] - 2]
+    return _contract(site, input, other, batch + "ik", batch + "kj", batch + "ij")
+
+
+@handles(torch.einsum)
+def _einsum(site, equation, *operands):
+    if len(operands) == 1 and isinstance(operands[0], (tuple, list)):
+        operands = operands[0]
+    inputs, _, output = equation.replace(" ", "").partition("->")
+    labels = inputs.split(",")
+    if len(operands) != 2 or len(labels) != 2 or "." in equation or not output:
+        site.fail(f"einsum {equation!r}", "name two operands, every axis and the output")
+    return _contract(site, *operands, *labels, output)
+
+
+@handles(getattr(F, "scaled_dot_product_attention", "torch.nn.functional.sdpa_"))
+def _scaled_dot_product_attention(
+    site, query, key, value, attn_mask=None, dropout_p=0.0, is_causal=False, scale=None,
+    enable_gqa=False,
+):  # fmt: skip
+    if is_causal or enable_gqa:
+        site.fail("attention that is causal or shares keys", "the attention operator has neither")
+    depth = site.view(query).sizes()[-1]
+    batch = "abcdefgh"[: len(site.view(query).axes) - 2]
+    scores = _contract(site, query, key, batch + "ik", batch + "jk", batch + "ij")
+    scores = _scores_scaled(site, scores, depth**-0.5 if scale is None else scale)
+    if attn_mask is not None:
+        scores = _scores_bias(site, scores, attn_mask)
+    scores = dataclasses.replace(scores, weighted=True)
+    return _contract(site, scores, value, batch + "ij", batch + "jk", batch + "ik")
+
+
+def _contract(site, first, second, labels, other_labels, output):
+    if isinstance(second, Scores):
+        first, second, labels, other_labels = second, first, other_labels, labels
+    summed = [label for label in labels if label in other_labels and label not in output]
+    own = [[x for x in labels if x not in other_labels], [x for x in other_labels if x not in labels]]
+    if len(summed) != 1 or any(len(x) != 1 for x in own) or set(output) - set(labels + other_labels):
+        site.fail(
+            f"the product {labels}, {other_labels} -> {output}",
+            "products are matrix products over pictures and heads",
+        )
+    if isinstance(first, Scores):
+        return _mix(site, first, second, labels, other_labels, output, summed[0])
+    query, key = site.view(first), site.view(second)
+    if query.wire.sizes != key.wire.sizes:
+        query, key = (_as_tokens(site, view) for view in (query, key))
+    by_label = dict(zip(labels, query.factors)), dict(zip(other_labels, key.factors))
+    depth = by_label[0][summed[0]]
+    if [f.letter for f in depth + by_label[1][summed[0]]] != ["C", "C"]:
+        site.fail(
+            f"the product of {site.shown(query)} and {site.shown(key)}",
+            "products of two computed tensors are those of attention: over the channels of heads",
+        )
+    kinds = {own[0][0]: "query", own[1][0]: "key"}
+    axes = tuple(
+        (kinds.get(x, "batch"), by_label[0][x] if x in by_label[0] else by_label[1][x])
+        for x in output
+    )
+    batch = [[by_label[i][x] for x in output if x not in kinds] for i in (0, 1)]
+    if list(map(_without_heads, batch[0])) != list(map(_without_heads, batch[1])):
+        site.fail(
+            f"the product of {site.shown(query)} and {site.shown(key)}, whose axes differ",
+            "queries and keys need the same pictures, windows and heads",
+        )
+    return Scores(query, key, depth[0], axes, query.scaled * key.scaled)
+
+
+def _without_heads(axis):
+    """The factors of an axis with heads known by their count: q, k and v may lie elsewhere."""
+    return tuple(f.parts[f.index] if f.letter == "C" else f for f in axis)
+
+
+def _weighted(site, scores, dim):
+    """The softmax says which of the two are the keys."""
+    if dim is None or scores.weighted or scores.axes[dim][0] == "batch":
+        site.fail(f"softmax of attention's scores along axis {dim}", "take it over the keys, once")
+    if scores.axes[dim][0] == "key":
+        return dataclasses.replace(scores, weighted=True)
+    turned = {"query": "key", "key": "query", "batch": "batch"}
+    axes = tuple((turned[kind], axis) for kind, axis in scores.axes)
+    return dataclasses.replace(
+        scores, query=scores.key, key=scores.query, axes=axes, weighted=True
+    )
+
+
+def _scores_scaled(site, scores, factor):
+    if scores.weighted or scores.bias:
+        site.fail("attention scores multiplied after the bias or the softmax", "scale q k^T only")
+    if isinstance(factor, Constant):
+        heads = _heads_of(scores)
+        if factor.tensor.numel() != (heads.parts[heads.index] if heads else 1):
+            site.fail(
+                f"attention scores multiplied by a constant of shape {list(factor.tensor.shape)}",
+                "multiply by a number, or by one for each head",
+            )
+        return dataclasses.replace(scores, head_scale=factor)
+    if not isinstance(factor, (int, float)):
+        site.fail("attention scores multiplied by a tensor", "multiply by a number")
+    return dataclasses.replace(scores, scale=scores.scale * float(factor))
+
+
+def _scores_bias(site, scores, bias):
+    if isinstance(bias, (int, float)) and bias == 0:
+        return scores
+    if not isinstance(bias, Constant) or not bias.tensor.is_floating_point() or scores.weighted:
+        site.fail(
+            "attention scores with a mask or a bias that depends on the input",
+            "add a weight of shape [heads, T, S]",
+        )
+    if scores.bias:
+        names = (*scores.bias.sources, *bias.sources)
+        bias = Constant(scores.bias.tensor + bias.tensor, names, scores.bias.sized or bias.sized)
+    return dataclasses.replace(scores, bias=bias)
+
+
+def _heads_of(scores):
+    """The factor of the channels that counts heads; None of a single head."""
+    heads = [f for kind, axis in scores.axes if kind == "batch" for f in axis if f.letter == "C"]
+    return heads[0] if heads else None
+
+
+def _mix(site, scores, values, labels, other_labels, output, summed):
+    """The second product: a layer `attention` of tokens, `window_attention` of images."""
+    v = site.view(values)
+    rows = next(axis for kind, axis in scores.axes if kind == "query")
+    whole = [str(f) for f in rows] == ["H", "W"] and scores.bias is None
+    if (whole and not scores.query.normalized) or v.wire.sizes != scores.query.wire.sizes:
+        scores, v = _scores_as_tokens(site, scores), _as_tokens(site, v)
+        rows = next(axis for kind, axis in scores.axes if kind == "query")
+    of_scores, of_values = dict(zip(labels, scores.axes)), dict(zip(other_labels, v.factors))
+    batch = [x for x in output if x in labels and x in other_labels]
+    if (
+        not scores.weighted
+        or of_scores[summed][0] != "key"
+        or of_values[summed] != of_scores[summed][1]
+        or any(_without_heads(of_scores[x][1]) != _without_heads(of_values[x]) for x in batch)
+        or v.scaled != 1.0
+        or v.normalized
+    ):
+        site.fail(
+            f"the product of attention's scores and {site.shown(v)}",
+            "write softmax(q @ k.transpose(-2, -1) * scale, -1) @ v with keys and values alike",
+        )
+    heads, depth = _heads_of(scores), of_values[[x for x in other_labels if x not in labels][0]]
+    count = heads.parts[heads.index] if heads else 1
+    depths = [view.sizes()[view.factors.index(axis)] for view, axis in
+              ((scores.query, (scores.depth,)), (v, depth))]  # fmt: skip
+    if depths[0] != depths[1]:
+        site.fail(
+            f"attention whose values have {depths[1]} channels a head and whose keys have "
+            f"{depths[0]}",
+            "give keys and values the same number of channels",
+        )
+    parts = (count, depths[0])
+
+    def in_output(axis):
+        return tuple(Factor("C", parts, 0) if f.letter == "C" else f for f in axis)
+
+    channel = (Factor("C", parts, 1) if count > 1 else Factor("C"),)
+    factors = tuple(in_output(of_scores[x][1]) if x in of_scores else channel for x in output)
+    attributes = {"heads": count}
+    if scores.query.normalized and scores.key.normalized:
+        attributes["cosine"] = True
+    elif not math.isclose(scores.scale, depths[0] ** -0.5, rel_tol=1e-6):
+        attributes["scale"] = scores.scale
+    sources = _attention_sources(site, scores.query, scores.key, v, count)
+    if scores.query.wire.sizes == "NCHW":
+        return _mix_windows(site, scores, sources, rows, attributes, factors)
+    if [str(f) for f in rows] != ["T"] or attributes.get("cosine") or scores.head_scale:
+        site.fail(
+            f"attention within parts of {scores.query.wire.name}",
+            "attend to all tokens, or arrange them as an image first",
+        )
+    weights = {"position_bias": _token_bias(site, scores)} if scores.bias else {}
+    return site.layer(
+        "attention", sources, attributes, weights, factors=factors, short="attention"
+    )
+
+
+def _attention_sources(site, query, key, value, heads):
+    """Views of the wires that hold q, k and v: one when they lie side by side in it."""
+    views = [query, key, value]
+    taken = [view.chosen[0] if len(view.chosen) == 1 else (None, 0) for view in views]
+    first = taken[0][0]
+    joint = first and first.letter == "C" and first.index == 0 and first.parts[0] == 3
+    if joint and [t for t in taken] == [(first, i) for i in range(3)]:
+        if all(view.wire is query.wire for view in views):
+            return [View(query.wire, _whole(query.wire.sizes))]
+    views = [site.settled(dataclasses.replace(v, scaled=1.0, normalized=0.0)) for v in views]
+    for view in views:
+        inner = sorted((f for a in view.factors for f in a if f.letter == "C"), key=lambda f: f.index)
+        outer = [f.parts[f.index] for f in inner[:-1] if f.parts]
+        if outer != ([heads] if heads > 1 else []):
+            site.fail(
+                f"attention over channels of {site.shown(view)}",
+                "arrange channels as [q, k, v, each of heads x depth]: "
+                "reshape(batch, tokens, 3, heads, depth)",
+            )
+    return [View(view.wire, _whole(view.wire.sizes)) for view in views]
+
+
+def _token_bias(site, scores):
+    """[1 or heads, T, S] of what was added to the scores."""
+    bias = scores.bias.tensor
+    while bias.dim() > 3 and bias.shape[0] == 1:
+        bias = bias[0]
+    bias = bias.unsqueeze(0) if bias.dim() == 2 else bias
+    kinds = [kind for kind, _ in scores.axes[-2:]]
+    if bias.dim() != 3 or kinds != ["query", "key"]:
+        site.fail(
+            f"a bias of shape {list(scores.bias.tensor.shape)} on attention's scores",
+            "add a bias of shape [heads, T, S]",
+        )
+    if bias.shape == scores.bias.tensor.shape:
+        return scores.bias
+    return _computed(scores.bias, bias.contiguous())
+
+
+def _mix_windows(site, scores, sources, rows, attributes, factors):
+    """Attention within windows of an image, or on grids spread over it."""
+    wire = scores.query.wire
+    names = [str(f) for f in rows]
+    if names not in (["H1", "W1"], ["H0", "W0"], ["H", "W"]):
+        site.fail(
+            f"attention along {names} of {site.shown(scores.query)}",
+            "windows cut both height and width into parts",
+        )
+    if names == ["H0", "W0"]:
+        attributes["arrangement"] = "grid"
+    known = wire.size_of()
+    attributes["window"] = [f.size(known) for f in rows]
+    if any(f.parts and len(f.parts) != 2 for f in rows):
+        site.fail(f"attention within windows of windows of {wire.name}", "cut the image once")
+    if len(sources) > 1:
+        sources = [_joint(site, sources)]
+    weights = {"position_bias": _relative_table(site, scores.bias, attributes["window"])}
+    return site.layer(
+        "window_attention", sources, attributes, {**weights, **_head_scale(site, scores)},
+        sizes="NCHW", factors=factors, short="attention",
+    )  # fmt: skip
+
+
+def _joint(site, sources):
+    tensor = torch.cat([source.wire.tensor for source in sources], 1)
+    return site.layer("concat", sources, sizes="NCHW", short="concat", tensor=tensor)
+
+
+def _as_tokens(site, view):
+    """A view of an image with its positions in one axis, as one of tokens."""
+    if view.wire.sizes != "NCHW":
+        return view
+    key = (view.wire.name, "tokens")
+    if key not in site.builder.cut:
+        site.builder.cut[key] = site.layer(
+            "image_to_tokens", [View(view.wire, _whole("NCHW"))], sizes="NTC",
+            short="image_to_tokens", patches=view.wire,
+            tensor=view.wire.tensor.flatten(2).transpose(1, 2).contiguous(),
+        ).wire  # fmt: skip
+    return dataclasses.replace(
+        view, wire=site.builder.cut[key], factors=tuple(map(_tokens_axis, view.factors))
+    )
+
+
+def _tokens_axis(axis):
+    return (Factor("T"),) if [str(f) for f in axis] == ["H", "W"] else axis
+
+
+def _scores_as_tokens(site, scores):
+    return dataclasses.replace(
+        scores, query=_as_tokens(site, scores.query), key=_as_tokens(site, scores.key),
+        axes=tuple((kind, _tokens_axis(axis)) for kind, axis in scores.axes),
+    )  # fmt: skip
+
+
+def _head_scale(site, scores):
+    if scores.head_scale is None:
+        return {}
+    scale = scores.head_scale.tensor.flatten() * scores.scale
+    return {"head_scale": _computed(scores.head_scale, scale)}
+
+
+def _relative_table(site, bias, window):
+    """[(2h-1)(2w-1), heads]: what a bias [.., heads, T, T] says for each offset of a key."""
+    if bias is None:
+        return None
+    height, width = window
+    tensor = bias.tensor.detach()
+    while tensor.dim() > 3 and tensor.shape[0] == 1:
+        tensor = tensor[0]
+    if tensor.dim() != 3 or list(tensor.shape[1:]) != [height * width] * 2:
+        site.fail(
+            f"a bias of shape {list(bias.tensor.shape)} for windows of {height} x {width}",
+            "add a bias of shape [heads, T, T], T the positions of a window",
+        )
+    y, x = (t.flatten() for t in torch.meshgrid(
+        torch.arange(height), torch.arange(width), indexing="ij"))  # fmt: skip
+    rows = y[:, None] - y[None, :] + height - 1
+    offsets = rows * (2 * width - 1) + x[:, None] - x[None, :] + width - 1
+    table = torch.zeros((2 * height - 1) * (2 * width - 1), tensor.shape[0], dtype=tensor.dtype)
+    table[offsets.flatten()] = tensor.permute(1, 2, 0).reshape(-1, tensor.shape[0])
+    if not torch.equal(table[offsets].permute(2, 0, 1), tensor):
+        site.fail(
+            "a bias that depends on more than the offset of key and query in their window",
+            "use relative positions, as Liu et al. 2021 do",
+        )
+    return _computed(bias, table)
+
+
+# ---------------------------------------------------------------------------------------------
+# Handlers: published building blocks that come as one function
+
+
+@handles("torchvision.models.swin_transformer.shifted_window_attention")
+def _shifted_window_attention(
+    site, input, qkv_weight, proj_weight, relative_position_bias, window_size, num_heads,
+    shift_size, attention_dropout=0.0, dropout=0.0, qkv_bias=None, proj_bias=None,
+    logit_scale=None, training=False,
+):  # fmt: skip
+    """Liu et al. 2021, and 2022 with `logit_scale`: linear, window_attention, linear."""
+    view = site.settled(input)
+    if view.axes != ("N", "H", "W", "C"):
+        site.fail(f"windows of {site.shown(view)}", "pass images as [N, H, W, C]")
+    heads, path = num_heads, site.origin.path
+    weights = {"position_bias": _relative_table(site, relative_position_bias, window_size)}
+    attributes = {"heads": heads, "window": list(window_size), "shift": list(shift_size)}
+    x, bias = view.tensor(), qkv_bias
+    if logit_scale is not None:
+        attributes["cosine"] = True
+        scale = torch.clamp(logit_scale.tensor.detach(), max=math.log(100.0)).exp()
+        weights["head_scale"] = _computed(logit_scale, scale.flatten())
+        if bias is not None:  # keys have none: their part is set to 0 in every call
+            zeroed = bias.tensor.detach().clone()
+            zeroed.view(3, -1)[1] = 0
+            bias = bias if torch.equal(zeroed, bias.tensor) else _computed(bias, zeroed)
+    if bias is not None:
+        weights["padding"] = bias
+    joint = site.layer(
+        "linear", [view], {}, {"weight": qkv_weight, "bias": bias}, name=f"{path}.qkv",
+        result=F.linear(x, qkv_weight.tensor, None if bias is None else bias.tensor),
+    )  # fmt: skip
+    unprojected = site.node.target(
+        x, qkv_weight.tensor, torch.eye(x.shape[-1]), relative_position_bias.tensor,
+        list(window_size), heads, shift_size=list(shift_size),
+        qkv_bias=None if bias is None else bias.tensor,
+        logit_scale=None if logit_scale is None else logit_scale.tensor,
+    )  # fmt: skip
+    mixed = site.layer(
+        "window_attention", [joint], attributes, weights, name=f"{path}.attention",
+        result=unprojected,
+    )  # fmt: skip
+    return site.layer(
+        "linear", [mixed], {}, {"weight": proj_weight, "bias": proj_bias}, name=f"{path}.proj"
+    )
+
+
+@handles("torchvision.models.swin_transformer._patch_merging_pad")
+def _patch_merging(site, input):
+    view = site.settled(input)
+    return site.layer("space_to_depth", [view], {"block": [2, 2]}, short="patches")
+
+
+# ---------------------------------------------------------------------------------------------
 # Export
 
 
@@ -1551,7 +2528,7 @@ def export(module, example_input, folder, labels=None, preprocess=None, referenc
     name            the graph's name; the folder's when None
 
     Returns {"layers": count, "parameters": count, "unused": names of the checkpoint's tensors that
-    the graph does not need}. Raises ExportError for what cannot be exported; nothing is written
+    the graph does not need, "computed": names of weights computed from some that it has}. Raises ExportError for what cannot be exported; nothing is written
     then.
     """
     inputs = tuple(example_input) if isinstance(example_input, (tuple, list)) else (example_input,)
@@ -1565,7 +2542,8 @@ def export(module, example_input, folder, labels=None, preprocess=None, referenc
 
     document = {"leadsman_graph": FORMAT_VERSION}
     document["name"] = name or os.path.basename(os.path.abspath(folder))
-    document.update(inputs=builder.inputs, outputs=builder.outputs, layers=builder.layers)
+    outputs = list(dict.fromkeys(builder.outputs))  # one that is returned twice is one
+    document.update(inputs=builder.inputs, outputs=outputs, layers=builder.layers)
     if preprocess is not None:
         document["preprocess"] = preprocess
     graph_text = _graph_text(document)
@@ -1582,14 +2560,18 @@ def export(module, example_input, folder, labels=None, preprocess=None, referenc
         tensors = {name: tensor.float() for name, tensor in builder.reference.items()}
         metadata = {"library": "torch", "version": str(torch.__version__)}
         write_safetensors(stale, tensors, metadata)
+    buffers = {name for name, _ in module.named_buffers()}
     return {
         "layers": len(builder.layers),
-        "parameters": sum(tensor.numel() for tensor in builder.weights.values()),
+        "parameters": sum(
+            tensor.numel() for name, tensor in builder.weights.items() if name not in buffers
+        ),
         "unused": [
             name
             for name, tensor in builder.checkpoint.items()
             if name not in builder.weights and tensor.is_floating_point()
         ],
+        "computed": [name for name in builder.weights if name not in builder.checkpoint],
     }
 
 
@@ -1662,7 +2644,8 @@ def vary_constant_parameters(module, seed=0):
     """Gives every parameter whose values are all equal seeded values around that one.
 
     Fresh modules have gains of 1, biases, class tokens and whole classifiers of 0: a mistake in
-    applying them would not show.
+    applying them would not show. Layer scales start near 0 (Touvron et al. 2021), which hides the
+    layers behind them; they get values around 0.5, as training might give them.
     """
     generator = torch.Generator().manual_seed(seed)
     with torch.no_grad():
@@ -1670,6 +2653,7 @@ def vary_constant_parameters(module, seed=0):
             if parameter.numel() == 0 or not bool((parameter == parameter.flatten()[0]).all()):
                 continue
             value = float(parameter.flatten()[0])
+            value = 0.5 if 0 < abs(value) < 1e-2 else value
             noise = torch.randn(parameter.shape, generator=generator).to(parameter.dtype)
             fan_in = parameter[0].numel() if parameter.dim() == 2 else 100
             spread = 0.1 * abs(value) if value else 1 / math.sqrt(fan_in)
@@ -1740,6 +2724,41 @@ def _torchvision_preprocess(torchvision, name, size):
     }
 
 
+def torchvision_model(name, size=None, classes=1000, seed=0):
+    """(module, preprocess): a classifier of torchvision with seeded weights, for [height, width]
+    (default: the size that its published weights were evaluated with)."""
+    import torchvision
+
+    crop = next(iter(torchvision.models.get_model_weights(name))).transforms().crop_size[0]
+    size = size or (crop, crop)
+    options = {"num_classes": classes}
+    if name.startswith("vit_"):
+        options["image_size"] = _only_square(name, size)
+    if name.startswith("maxvit_"):
+        options["input_size"] = size
+    if name in ("googlenet", "inception_v3"):  # as their weights are published
+        options.update(transform_input=True, init_weights=True)
+    if name == "googlenet":
+        options["aux_logits"] = False
+    if re.match("(wide_)?res(net|next)", name):  # as they are trained (Goyal et al. 2017)
+        options["zero_init_residual"] = True
+    torch.manual_seed(seed)
+    module = torchvision.models.get_model_builder(name)(weights=None, **options)
+    return module, _torchvision_preprocess(torchvision, name, size)
+
+
+def _only_square(name, size):
+    if size[0] != size[1]:
+        raise ValueError(f"{name} of torchvision takes square images only, not {size[0]}x{size[1]}")
+    return size[0]
+
+
+def settle(module, size, seed=0):
+    """Gives a seeded module values that training might have given: see the functions called."""
+    vary_constant_parameters(module, seed)
+    settle_batch_norm(module, picture_like(8, *size, seed=seed + 2))
+
+
 def _load_checkpoint(module, path):
     state = torch.load(path, map_location="cpu", weights_only=True)
     for key in ("state_dict", "model"):
@@ -1780,8 +2799,7 @@ def main(arguments=None):
                 labels = file.read().splitlines()
         except (OSError, UnicodeDecodeError) as error:
             return _failed(f"{options.labels}: {error}")
-    crop = meta.transforms().crop_size[0]
-    size = (crop, crop)
+    size = None
     if options.size:
         try:
             height, width = options.size.lower().split("x")
@@ -1789,17 +2807,11 @@ def main(arguments=None):
         except ValueError:
             parser.error(f"--size wants HxW, as in 224x224, not {options.size}")
 
-    torch.manual_seed(options.seed)
-    builder = torchvision.models.get_model_builder(name)
-    extra = {"num_classes": len(labels)}
-    if name.startswith("vit_"):  # asserts its image size
-        if size[0] != size[1]:
-            parser.error(f"{name} of torchvision takes square images only, not {options.size}")
-        extra["image_size"] = size[0]
-    if re.match("(wide_)?res(net|next)", name):  # as they are trained (Goyal et al. 2017)
-        extra["zero_init_residual"] = True
-    module = builder(weights=None, **extra)
-    example = picture_like(1, *size, seed=options.seed + 1)
+    try:
+        module, preprocess = torchvision_model(name, size, len(labels), options.seed)
+    except ValueError as error:
+        parser.error(str(error))
+    example = picture_like(1, *preprocess["crop"], seed=options.seed + 1)
     if options.checkpoint:
         try:
             _load_checkpoint(module, options.checkpoint)
@@ -1809,9 +2821,7 @@ def main(arguments=None):
                 f"(--labels says how many there are): {error}"
             )
     else:
-        vary_constant_parameters(module, options.seed)
-        settle_batch_norm(module, picture_like(8, *size, seed=options.seed + 2))
-    preprocess = _torchvision_preprocess(torchvision, name, size)
+        settle(module, preprocess["crop"], options.seed)
     try:
         summary = export(module, example, options.out, labels, preprocess, name=name)
     except (ExportError, OSError) as error:

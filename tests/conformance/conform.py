@@ -1,13 +1,13 @@
 #!/usr/bin/env python3
 """Whole architectures against the reference library: export, run, compare every layer.
 
-    python3 tests/conformance/conform.py --tool build/release/leadsman [--models NAME,NAME]
-                                         [--size HxW] [--table FILE.md]
+    python3 tests/conformance/conform.py [--tool build/release/leadsman] [--models NAME,NAME|all]
+                                         [--sizes own,HxW] [--table FILE.md]
 
 Weights are seeded; batch-norm statistics come from running data through, so that activations
-neither vanish nor explode. For each architecture, printed as a table and returned by `conform`:
-parameters (equal to torchvision's own metadata), multiply-adds, the layer nearest to its threshold
-in isolated mode, and the relative L2 error of the logits from a fused run.
+neither vanish nor explode. For each architecture and size, printed as a table and returned by
+`conform`: parameters (equal to torchvision's own metadata), multiply-adds, the layer nearest to its
+threshold in isolated mode, and the relative L2 error of the logits from a fused run.
 """
 
 import argparse
@@ -23,8 +23,27 @@ import tempfile
 ROOT = pathlib.Path(__file__).resolve().parents[2]
 sys.path.insert(0, str(ROOT / "loaders" / "torch"))
 
-# The families that this version covers, smallest member of each first.
-COVERED = ["resnet18", "mobilenet_v2", "vgg11", "resnet50", "vit_b_16"]
+# A small member of each family that torchvision 0.14 lists as classifiers.
+FAMILIES = [
+    "alexnet", "convnext_tiny", "densenet121", "efficientnet_b0", "efficientnet_v2_s", "googlenet",
+    "inception_v3", "maxvit_t", "mnasnet0_5", "mobilenet_v2", "mobilenet_v3_small",
+    "regnet_x_400mf", "regnet_y_400mf", "resnet18", "resnet50", "resnext50_32x4d",
+    "shufflenet_v2_x0_5", "squeezenet1_1", "swin_t", "swin_v2_t", "vgg11", "vit_b_16",
+    "wide_resnet50_2",
+]  # fmt: skip
+
+# An image size that divides nothing, for architectures that take any.
+ODD = "229x173"
+
+
+def odd_size(name):
+    """What an architecture allows beside its own size: transformers over patches want whole ones;
+    MaxViT's windows divide every map."""
+    if name.startswith("maxvit"):
+        return "448x224"
+    if name.startswith("vit_"):
+        return "160x160" if name != "vit_h_14" else "238x238"
+    return ODD
 
 
 @dataclasses.dataclass
@@ -32,7 +51,7 @@ class Result:
     architecture: str
     size: str
     parameters: int
-    published_parameters: int
+    published_parameters: int  # by torchvision's metadata: see check_parameters
     macs: int
     departures: list
     worst_layer: str
@@ -53,24 +72,49 @@ def run_json(*command):
     return json.loads(done.stdout)
 
 
+def all_names():
+    import torchvision
+
+    return torchvision.models.list_models(module=torchvision.models)
+
+
+def parse_size(text):
+    return tuple(int(side) for side in text.split("x"))
+
+
 def export_torchvision(name, folder, size=None):
+    """Writes the bundle; returns how many parameters its graph should have."""
     import leadsman_export
 
-    arguments = ["--torchvision", name, "--seed", "1", "--out", str(folder)]
-    if size:
-        arguments += ["--size", size]
-    code = leadsman_export.main(arguments)
-    if code:
-        raise RuntimeError(f"{name}: the exporter ended with {code}")
+    module, preprocess = leadsman_export.torchvision_model(name, size and parse_size(size), seed=1)
+    leadsman_export.settle(module, preprocess["crop"], seed=1)
+    example = leadsman_export.picture_like(1, *preprocess["crop"], seed=2)
+    summary = leadsman_export.export(module, example, folder, preprocess=preprocess, name=name)
+    if size is None or not name.startswith("vit_"):  # which has a position for each patch
+        check_parameters(name, module, summary)
+    return summary["parameters"]
+
+
+def check_parameters(name, module, summary):
+    """The module's parameters are those of the metadata; the graph has all of them but auxiliary
+    heads of training and networks that compute a table from nothing else (Liu et al. 2022)."""
+    import torchvision
+
+    sizes = {n: p.numel() for n, p in module.named_parameters()}
+    published = next(iter(torchvision.models.get_model_weights(name))).meta["num_params"]
+    if sum(sizes.values()) != published:
+        raise RuntimeError(f"{name} has {sum(sizes.values())} parameters, published: {published}")
+    unused = [n for n in summary["unused"] if n in sizes]
+    inexplicable = [n for n in unused if "aux" not in n.lower() and not summary["computed"]]
+    used = published - sum(sizes[n] for n in unused)
+    if inexplicable or (summary["parameters"] != used and not summary["computed"]):
+        raise RuntimeError(f"{name}: {summary['parameters']} of {used} parameters are in the graph")
 
 
 def conform(tool, name, size=None):
-    import torchvision
-
-    published = next(iter(torchvision.models.get_model_weights(name))).meta["num_params"]
     folder = pathlib.Path(tempfile.mkdtemp(prefix=f"leadsman-{name}-"))
     try:
-        export_torchvision(name, folder, size)
+        expected = export_torchvision(name, folder, size)
         described = run_json(tool, "describe", folder, "--json", *(["--size", size] if size else []))
         verified = run_json(tool, "verify", folder, "--json")
     finally:
@@ -80,7 +124,7 @@ def conform(tool, name, size=None):
         architecture=name,
         size="x".join(map(str, next(iter(described["inputs"].values()))[2:])),
         parameters=described["parameters"],
-        published_parameters=published,
+        published_parameters=expected,
         macs=described["macs"],
         departures=[row["layer"] for row in verified["layers"] if row["departs"]],
         worst_layer=verified["worst_layer"],
@@ -108,21 +152,27 @@ def row(result):
 def main():
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("--tool", help="the leadsman binary (default: build/release/leadsman)")
-    parser.add_argument("--models", help="names by commas (default: those covered)")
-    parser.add_argument("--size", metavar="HxW", help="default: each model's own")
+    parser.add_argument("--models", help="names by commas, or all (default: one of each family)")
+    parser.add_argument(
+        "--sizes", default="own", metavar="SIZES",
+        help="own, odd or HxW, by commas (default: own; odd is another size for each model)",
+    )  # fmt: skip
     parser.add_argument("--table", metavar="FILE", help="write the table there, too")
     options = parser.parse_args()
-    names = options.models.split(",") if options.models else COVERED
+    names = all_names() if options.models == "all" else (options.models or "").split(",")
+    names = names if options.models else FAMILIES
     print(HEADER, flush=True)
     lines = [HEADER]
     bad = 0
     for name in names:
-        result = conform(tool_path(options.tool), name, options.size)
-        lines.append(row(result))
-        print(lines[-1], flush=True)
-        bad += bool(result.departures) or result.parameters != result.published_parameters
-    if options.table:
-        pathlib.Path(options.table).write_text("\n".join(lines) + "\n", encoding="utf-8")
+        for word in options.sizes.split(","):
+            size = {"own": None, "odd": odd_size(name)}.get(word, word)
+            result = conform(tool_path(options.tool), name, size)
+            lines.append(row(result))
+            print(lines[-1], flush=True)
+            bad += bool(result.departures) or result.parameters != result.published_parameters
+            if options.table:
+                pathlib.Path(options.table).write_text("\n".join(lines) + "\n", encoding="utf-8")
     return 1 if bad else 0
 
 

@@ -58,8 +58,38 @@ def conv2d(x, a, w):
     return F.conv2d(x, w["weight"], w.get("bias"), stride, 0, dilation, a.get("groups", 1))
 
 
+def _channel_shape(x):
+    return [1, -1, 1, 1] if x.dim() == 4 else [1] * (x.dim() - 1) + [-1]
+
+
+def scale(x, a, w):
+    y = x * a.get("factor", 1.0) + a.get("offset", 0.0)
+    if "weight" in w:
+        y = x * w["weight"].reshape(_channel_shape(x)) * a.get("factor", 1.0) + a.get("offset", 0.0)
+    return y + w["bias"].reshape(_channel_shape(x)) if "bias" in w else y
+
+
+def slice_(x, a, w):
+    axis = 1 if a.get("axis") == "tokens" or x.dim() == 4 else x.dim() - 1
+    start = a.get("start", 0)
+    return x.narrow(axis, start, a.get("count", 0) or x.shape[axis] - start)
+
+
+def space_to_depth(x, a, w):
+    h, w_ = _pair(a.get("block", 2))
+    x = F.pad(x, (0, -x.shape[3] % w_, 0, -x.shape[2] % h))
+    cells = [(i, j) for j in range(w_) for i in range(h)]
+    if a.get("order", "columns") == "rows":
+        cells = sorted(cells)
+    return torch.cat([x[:, :, i::h, j::w_] for i, j in cells], 1)
+
+
+def channel_shuffle(x, a, w):
+    return x.unflatten(1, (a["groups"], -1)).transpose(1, 2).flatten(1, 2)
+
+
 def batch_norm(x, a, w):
-    shape = [1, -1, 1, 1] if x.dim() == 4 else [1, -1]
+    shape = _channel_shape(x)
     mean, variance = w["mean"].view(shape), w["variance"].view(shape)
     y = (x - mean) / torch.sqrt(variance + a.get("eps", 1e-5))
     y = y * w["weight"].view(shape) if "weight" in w else y
@@ -86,6 +116,7 @@ ACTIVATIONS = {
     "hard_sigmoid": lambda x, a: ((x + 3) / 6).clamp(0, 1),
     "hard_swish": lambda x, a: x * ((x + 3) / 6).clamp(0, 1),
     "tanh": lambda x, a: torch.tanh(x),
+    "mish": lambda x, a: x * torch.tanh(torch.log1p(torch.exp(x))),
 }  # fmt: skip
 
 
@@ -130,7 +161,60 @@ def _scores(q, k, a):
 
 def attention(inputs, a, w):
     q, k, v = _heads(inputs, a["heads"])
-    return (_scores(q, k, a) @ v).permute(0, 2, 1, 3).flatten(2)
+    if "position_bias" not in w:
+        return (_scores(q, k, a) @ v).permute(0, 2, 1, 3).flatten(2)
+    scores = (q @ k.mT) * (a.get("scale", 0) or q.shape[-1] ** -0.5) + w["position_bias"]
+    return (torch.softmax(scores, -1) @ v).permute(0, 2, 1, 3).flatten(2)
+
+
+def window_attention(x, a, w):
+    """By rolling, cutting and masking, as the paper's authors describe it (Liu et al. 2021)."""
+    n, channels, height, width = x.shape
+    (h, w_), shift = _pair(a["window"]), list(_pair(a.get("shift", 0)))
+    padding = w.get("padding", torch.zeros(channels, dtype=x.dtype))
+    rows, columns = height + -height % h, width + -width % w_
+    padded = padding.view(1, -1, 1, 1).expand(n, -1, rows, columns).clone()
+    padded[:, :, :height, :width] = x
+    shift = [0 if size <= window else s for s, size, window in zip(shift, (rows, columns), (h, w_))]
+    rolled = padded.roll((-shift[0], -shift[1]), (2, 3))
+    grid = a.get("arrangement") == "grid"
+
+    def cut(t):  # [n, windows, positions, c]
+        inner = (rows // h, h, columns // w_, w_) if not grid else (h, rows // h, w_, columns // w_)
+        t = t.reshape(t.shape[0], t.shape[1], *inner)
+        t = t.permute(0, 3, 5, 2, 4, 1) if grid else t.permute(0, 2, 4, 3, 5, 1)
+        return t.reshape(t.shape[0], -1, h * w_, t.shape[-1])
+
+    def region(size, window, s):
+        index = torch.arange(size)
+        return (index >= size - window).long() + (index >= size - s).long() if s else index * 0
+
+    regions = region(rows, h, shift[0])[:, None] * 3 + region(columns, w_, shift[1])[None, :]
+    regions = cut(regions[None, None])[..., 0]  # [1, windows, positions]
+    mask = -100.0 * (regions[..., None] != regions[..., None, :])
+    heads = a["heads"]
+    q, k, v = (t.unflatten(-1, (heads, -1)).transpose(2, 3) for t in cut(rolled).chunk(3, -1))
+    if a.get("cosine"):
+        scores = F.normalize(q, dim=-1) @ F.normalize(k, dim=-1).mT
+    else:
+        scores = (q @ k.mT) * (a.get("scale", 0) or q.shape[-1] ** -0.5)
+    if "head_scale" in w:
+        scores = scores * w["head_scale"].view(-1, 1, 1)
+    if "position_bias" in w:
+        place = torch.cartesian_prod(torch.arange(h), torch.arange(w_))
+        offset = place[:, None] - place[None] + torch.tensor([h - 1, w_ - 1])
+        scores = scores + w["position_bias"][offset[..., 0] * (2 * w_ - 1) + offset[..., 1]].permute(
+            2, 0, 1
+        )
+    y = torch.softmax(scores + mask[:, :, None], -1) @ v  # [n, windows, heads, positions, d]
+    y = y.transpose(2, 3).flatten(3)
+    inner = (rows // h, columns // w_, h, w_)
+    if grid:
+        y = y.reshape(n, rows // h, columns // w_, h, w_, -1).permute(0, 5, 3, 1, 4, 2)
+    else:
+        y = y.reshape(n, *inner, -1).permute(0, 5, 1, 3, 2, 4)
+    y = y.reshape(n, -1, rows, columns).roll(shift, (2, 3))
+    return y[:, :, :height, :width]
 
 
 def attention_weights(inputs, a, w):
@@ -152,7 +236,31 @@ def _one(function):
 
 OPERATORS = {
     "conv2d": _one(conv2d),
-    "linear": _one(lambda x, a, w: F.linear(x, w["weight"], w.get("bias"))),
+    "linear": _one(
+        lambda x, a, w: _channels_last(lambda t: F.linear(t, w["weight"], w.get("bias")), x)
+    ),
+    "scale": _one(scale),
+    "slice": _one(slice_),
+    "space_to_depth": _one(space_to_depth),
+    "channel_shuffle": _one(channel_shuffle),
+    "window_attention": _one(window_attention),
+    "features_to_image": _one(lambda x, a, w: x[:, :, None, None]),
+    "tokens_to_image": lambda inputs, a, w: inputs[0].mT.unflatten(2, inputs[1].shape[2:]),
+    "transpose": _one(lambda x, a, w: x.mT),
+    "group_norm": _one(
+        lambda x, a, w: F.group_norm(x, a["groups"], w.get("weight"), w.get("bias"), a["eps"])
+    ),
+    "local_response_norm": _one(
+        lambda x, a, w: F.local_response_norm(x, a["size"], a["alpha"], a["beta"], a["k"])
+    ),
+    "l2_normalize": _one(
+        lambda x, a, w: F.normalize(x, dim=1 if x.dim() == 4 else -1, eps=a["eps"])
+    ),
+    "adaptive_max_pool": _one(lambda x, a, w: F.adaptive_max_pool2d(x, a["output_size"])),
+    "pad": _one(lambda x, a, w: _padded(x, a["padding"], a.get("value", 0.0))),
+    "resize": _one(
+        lambda x, a, w: F.interpolate(x, scale_factor=a["factor"], mode=a["interpolation"])
+    ),
     "batch_norm": _one(batch_norm),
     "layer_norm": _one(layer_norm),
     "activation": _one(lambda x, a, w: ACTIVATIONS[a["kind"]](x, a)),
@@ -170,7 +278,7 @@ OPERATORS = {
     "attention_weights": attention_weights,
     "select": _one(lambda x, a, w: x[:, a["index"]]),
     "mean": _one(mean),
-    "softmax": _one(lambda x, a, w: torch.softmax(x, -1)),
+    "softmax": _one(lambda x, a, w: torch.softmax(x, 1 if x.dim() == 4 else -1)),
     "identity": _one(lambda x, a, w: x),
 }
 
