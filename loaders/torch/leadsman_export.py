@@ -1948,8 +1948,10 @@ def _channels(site, view, dim, start, count):
     """A run of channels, axis `dim` of the view."""
     view = site.settled(view)
     axis = view.wire.sizes.index("C")
-    tensor = view.wire.tensor.narrow(axis, start, count).contiguous()
-    return site.layer("slice", [view], {"start": start, "count": count}, short="slice", tensor=tensor)
+    return site.layer(
+        "slice", [view], {"start": start, "count": count}, short="slice",
+        tensor=view.wire.tensor.narrow(axis, start, count).contiguous(),
+    )  # fmt: skip
 
 
 @handles(torch.select, "select")
@@ -2186,8 +2188,12 @@ def _contract(site, first, second, labels, other_labels, output):
     if isinstance(second, Scores):
         first, second, labels, other_labels = second, first, other_labels, labels
     summed = [label for label in labels if label in other_labels and label not in output]
-    own = [[x for x in labels if x not in other_labels], [x for x in other_labels if x not in labels]]
-    if len(summed) != 1 or any(len(x) != 1 for x in own) or set(output) - set(labels + other_labels):
+    own = [
+        [x for x in labels if x not in other_labels],
+        [x for x in other_labels if x not in labels],
+    ]
+    strange = set(output) - set(labels + other_labels)
+    if len(summed) != 1 or any(len(x) != 1 for x in own) or strange:
         site.fail(
             f"the product {labels}, {other_labels} -> {output}",
             "products are matrix products over pictures and heads",
@@ -2336,13 +2342,14 @@ def _attention_sources(site, query, key, value, heads):
     taken = [view.chosen[0] if len(view.chosen) == 1 else (None, 0) for view in views]
     first = taken[0][0]
     joint = first and first.letter == "C" and first.index == 0 and first.parts[0] == 3
-    if joint and [t for t in taken] == [(first, i) for i in range(3)]:
+    if joint and taken == [(first, i) for i in range(3)]:
         if all(view.wire is query.wire for view in views):
             return [View(query.wire, _whole(query.wire.sizes))]
     views = [site.settled(dataclasses.replace(v, scaled=1.0, normalized=0.0)) for v in views]
     for view in views:
-        inner = sorted((f for a in view.factors for f in a if f.letter == "C"), key=lambda f: f.index)
-        outer = [f.parts[f.index] for f in inner[:-1] if f.parts]
+        channels = [f for axis in view.factors for f in axis if f.letter == "C"]
+        channels.sort(key=lambda f: f.index)
+        outer = [f.parts[f.index] for f in channels[:-1] if f.parts]
         if outer != ([heads] if heads > 1 else []):
             site.fail(
                 f"attention over channels of {site.shown(view)}",
@@ -2528,8 +2535,8 @@ def export(module, example_input, folder, labels=None, preprocess=None, referenc
     name            the graph's name; the folder's when None
 
     Returns {"layers": count, "parameters": count, "unused": names of the checkpoint's tensors that
-    the graph does not need, "computed": names of weights computed from some that it has}. Raises ExportError for what cannot be exported; nothing is written
-    then.
+    the graph does not need, "computed": names of weights computed from the checkpoint's}. Raises
+    ExportError for what cannot be exported; nothing is written then.
     """
     inputs = tuple(example_input) if isinstance(example_input, (tuple, list)) else (example_input,)
     with torch.no_grad(), _in_eval_mode(module):

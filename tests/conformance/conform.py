@@ -115,7 +115,8 @@ def conform(tool, name, size=None):
     folder = pathlib.Path(tempfile.mkdtemp(prefix=f"leadsman-{name}-"))
     try:
         expected = export_torchvision(name, folder, size)
-        described = run_json(tool, "describe", folder, "--json", *(["--size", size] if size else []))
+        at_size = ["--size", size] if size else []
+        described = run_json(tool, "describe", folder, "--json", *at_size)
         verified = run_json(tool, "verify", folder, "--json")
     finally:
         shutil.rmtree(folder)

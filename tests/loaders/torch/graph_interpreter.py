@@ -203,9 +203,8 @@ def window_attention(x, a, w):
     if "position_bias" in w:
         place = torch.cartesian_prod(torch.arange(h), torch.arange(w_))
         offset = place[:, None] - place[None] + torch.tensor([h - 1, w_ - 1])
-        scores = scores + w["position_bias"][offset[..., 0] * (2 * w_ - 1) + offset[..., 1]].permute(
-            2, 0, 1
-        )
+        table = w["position_bias"][offset[..., 0] * (2 * w_ - 1) + offset[..., 1]]
+        scores = scores + table.permute(2, 0, 1)
     y = torch.softmax(scores + mask[:, :, None], -1) @ v  # [n, windows, heads, positions, d]
     y = y.transpose(2, 3).flatten(3)
     inner = (rows // h, columns // w_, h, w_)

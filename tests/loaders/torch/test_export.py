@@ -595,7 +595,7 @@ class ErrorTest(FolderTest):
             (Call(lambda x: x @ x.mT + x.mean()), tokens, "depends on the input|mean over"),
             (Call(lambda x: (x @ x.mT).softmax(0)), tokens, "scores along axis 0"),
             (Call(lambda x: x @ x.mT), tokens, "understood only as attention"),
-            (Call(lambda x: (x @ x.mT).softmax(1) @ x), tokens, "the product of attention's scores"),
+            (Call(lambda x: (x @ x.mT).softmax(1) @ x), tokens, "product of attention's scores"),
             (Call(lambda x: x + x.mean((2, 3), keepdim=True)), None, "repeats one of its operands"),
             (Call(lambda x: torch.cat([x, x], 2)), None, "only channels|along axis 2"),
             (Call(lambda x: x.view(1, 2, 2, 6, 6)), None, r"axes \[N, C0, C1, H, W\] \(C0 = 2"),
