@@ -1,6 +1,6 @@
 // Rewrites, each a small function that says whether it took the following step in.
 #include <algorithm>
-#include <cmath>
+#include <optional>
 
 #include "engine/plan_state.h"
 
@@ -41,7 +41,7 @@ class Fuser {
       if (out.observed || out.is_output || readers_[step.output].size() != 1) return;
       const std::size_t r = readers_[step.output].front();
       Step& reader = plan_.steps[r];
-      if (!(drop_identity(reader) || fold_batch_norm(step, reader) || add_residual(s, reader) ||
+      if (!(drop_identity(reader) || fold_affine(step, reader) || add_residual(s, reader) ||
             append_activation(step, reader))) {
         return;
       }
@@ -55,19 +55,16 @@ class Fuser {
 
   static bool drop_identity(const Step& reader) { return reader.op->contract().name == "identity"; }
 
-  // y = gamma (W x + b - mean) / sqrt(var + eps) + beta is again of the form W' x + b' (Ioffe &
-  // Szegedy 2015, at inference). Scales in double, so that the weights are rounded once.
-  static bool fold_batch_norm(Step& step, const Step& reader) {
+  // a (W x + b) + c is again of the form W' x + b' (for batch norm: Ioffe & Szegedy 2015). In
+  // double, so that the weights are rounded once.
+  static bool fold_affine(Step& step, const Step& reader) {
     const std::string_view op = step.op->contract().name;
-    if (reader.op->contract().name != "batch_norm" || (op != "conv2d" && op != "linear") ||
-        step.residual || step.epilogue.activation.kind != ops::ActivationKind::kNone) {
+    if ((op != "conv2d" && op != "linear") || step.residual ||
+        step.epilogue.activation.kind != ops::ActivationKind::kNone) {
       return false;
     }
-    const Tensor* gamma = reader.context.weight("weight");
-    const Tensor* beta = reader.context.weight("bias");
-    const Tensor& mean = *reader.context.weight("mean");
-    const Tensor& variance = *reader.context.weight("variance");
-    const double eps = reader.context.attributes.number("eps");
+    const std::optional<ops::ChannelAffine> affine = reader.op->affine(reader.context);
+    if (!affine) return false;
     Tensor weight = *step.context.weight("weight");
     const std::int64_t channels = weight.shape()[0];
     Tensor bias = step.context.weight("bias") ? *step.context.weight("bias") : Tensor({channels});
@@ -75,14 +72,12 @@ class Fuser {
     float* b = bias.mutable_data();
     const std::int64_t length = weight.elements() / channels;
     for (std::int64_t o = 0; o < channels; ++o) {
-      const double scale = (gamma ? static_cast<double>(gamma->data()[o]) : 1.0) /
-                           std::sqrt(static_cast<double>(variance.data()[o]) + eps);
+      const double factor = affine->factor[static_cast<std::size_t>(o)];
       for (std::int64_t k = 0; k < length; ++k) {
-        w[o * length + k] = static_cast<float>(static_cast<double>(w[o * length + k]) * scale);
+        w[o * length + k] = static_cast<float>(static_cast<double>(w[o * length + k]) * factor);
       }
-      b[o] = static_cast<float>((static_cast<double>(b[o]) - static_cast<double>(mean.data()[o])) *
-                                    scale +
-                                (beta ? static_cast<double>(beta->data()[o]) : 0.0));
+      b[o] = static_cast<float>(static_cast<double>(b[o]) * factor +
+                                affine->summand[static_cast<std::size_t>(o)]);
     }
     step.context.weights["weight"] = weight;
     step.context.weights["bias"] = bias;

@@ -17,6 +17,7 @@
 
 #include "leadsman/attributes.h"
 #include "leadsman/tensor.h"
+#include "ops/channel_affine.h"
 #include "ops/epilogue.h"
 
 namespace leadsman::ops {
@@ -124,6 +125,9 @@ class Operator {
   virtual std::span<const Strategy* const> strategies() const = 0;
   /// True when every kernel of this operator honours an Epilogue (residual and activation).
   virtual bool takes_epilogue() const { return false; }
+  /// What the operator does to each channel, when that is an affine map that the planner may fold
+  /// into the weights of a product before it.
+  virtual std::optional<ChannelAffine> affine(const OpContext& /*context*/) const { return {}; }
   /// True when the output is the input's bytes under another shape: no work, no memory.
   virtual bool is_view(const OpContext& /*context*/) const { return false; }
 };

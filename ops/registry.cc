@@ -9,9 +9,11 @@
 #include "ops/attention_weights/attention_weights.h"
 #include "ops/avg_pool/avg_pool.h"
 #include "ops/batch_norm/batch_norm.h"
+#include "ops/channel_shuffle/channel_shuffle.h"
 #include "ops/class_token/class_token.h"
 #include "ops/concat/concat.h"
 #include "ops/conv2d/conv2d.h"
+#include "ops/features_to_image/features_to_image.h"
 #include "ops/flatten/flatten.h"
 #include "ops/identity/identity.h"
 #include "ops/image_to_tokens/image_to_tokens.h"
@@ -22,8 +24,14 @@
 #include "ops/mul/mul.h"
 #include "ops/operator.h"
 #include "ops/position_embed/position_embed.h"
+#include "ops/scale/scale.h"
 #include "ops/select/select.h"
+#include "ops/slice/slice.h"
 #include "ops/softmax/softmax.h"
+#include "ops/space_to_depth/space_to_depth.h"
+#include "ops/tokens_to_image/tokens_to_image.h"
+#include "ops/transpose/transpose.h"
+#include "ops/window_attention/window_attention.h"
 
 namespace leadsman::ops {
 
@@ -36,9 +44,11 @@ std::span<const Operator* const> all_operators() {
       &attention_weights_operator(),
       &avg_pool_operator(),
       &batch_norm_operator(),
+      &channel_shuffle_operator(),
       &class_token_operator(),
       &concat_operator(),
       &conv2d_operator(),
+      &features_to_image_operator(),
       &flatten_operator(),
       &identity_operator(),
       &image_to_tokens_operator(),
@@ -48,8 +58,14 @@ std::span<const Operator* const> all_operators() {
       &mean_operator(),
       &mul_operator(),
       &position_embed_operator(),
+      &scale_operator(),
       &select_operator(),
+      &slice_operator(),
       &softmax_operator(),
+      &space_to_depth_operator(),
+      &tokens_to_image_operator(),
+      &transpose_operator(),
+      &window_attention_operator(),
   };
   return all;
 }

@@ -17,7 +17,7 @@ class Attention final : public Operator {
         .min_inputs = 1,
         .max_inputs = 3,
         .attributes = attention_attributes(),
-        .weights = {},
+        .weights = {attention_bias_spec()},
     };
     return contract;
   }
@@ -74,15 +74,25 @@ AttentionGeometry::AttentionGeometry(const OpContext& context, bool values) {
   }
   d = c / heads;
   const double given = context.attributes.number("scale");
+  if (const Tensor* given_bias = context.weight("position_bias")) {
+    bias = *given_bias;
+    if (bias.shape() != Shape{heads, t, s} && bias.shape() != Shape{1, t, s}) {
+      throw_input("position_bias has shape " + bias.shape().to_string() + ", expected " +
+                  Shape{heads, t, s}.to_string() + " or " + Shape{1, t, s}.to_string() +
+                  ": it fits one number of tokens");
+    }
+  }
   scale = static_cast<float>(given == 0.0 ? 1.0 / std::sqrt(static_cast<double>(d)) : given);
 }
 
 simd::HeadRows AttentionGeometry::rows(std::span<const ConstTensorView> inputs, Role role,
                                        std::int64_t image, std::int64_t head) const {
   const auto index = static_cast<std::int64_t>(role);
-  if (joint) return {inputs[0].data + image * t * 3 * c + index * c + head * d, 3 * c};
+  if (joint)
+    return {.data = inputs[0].data + image * t * 3 * c + index * c + head * d, .stride = 3 * c};
   const std::int64_t tokens = role == kQueries ? t : s;
-  return {inputs[static_cast<std::size_t>(index)].data + image * tokens * c + head * d, c};
+  const float* data = inputs[static_cast<std::size_t>(index)].data;
+  return {.data = data + image * tokens * c + head * d, .stride = c};
 }
 
 std::vector<AttributeSpec> attention_attributes() {
@@ -100,6 +110,10 @@ std::vector<AttributeSpec> attention_attributes() {
            .minimum = 0.0,
            .maximum = 1e30,
            .choices = {}}};
+}
+
+WeightSpec attention_bias_spec() {
+  return {"position_bias", false, "[heads or 1, T, S], added to the scores"};
 }
 
 const Operator& attention_operator() {

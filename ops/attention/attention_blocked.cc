@@ -14,7 +14,7 @@ class BlockedKernel final : public Kernel {
  public:
   explicit BlockedKernel(const OpContext& context)
       : g_(context, true),
-        plan_(g_.t, g_.s, g_.d, g_.scale),
+        plan_(g_.t, g_.s, g_.d),
         zeros_(plan_.zero_floats()),
         head_bytes_(simd::aligned_floats_bytes(plan_.packed_key_floats()) +
                     simd::aligned_floats_bytes(plan_.packed_value_floats())),
@@ -58,9 +58,9 @@ class BlockedKernel final : public Kernel {
       const std::int64_t head = task / plan_.blocks();
       plan_.attend_block(
           task % plan_.blocks(), g_.rows(call.inputs, Role::kQueries, image, head),
-          packed_keys(call, head), packed_values(call, head), zeros_.data(),
+          packed_keys(call, head), packed_values(call, head), g_.terms(head), zeros_.data(),
           reinterpret_cast<float*>(scratch + static_cast<std::size_t>(worker) * scratch_bytes_),
-          call.output.data + image * g_.t * g_.c + head * g_.d, g_.c);
+          {.data = call.output.data + image * g_.t * g_.c + head * g_.d, .stride = g_.c});
     });
   }
 

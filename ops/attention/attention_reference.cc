@@ -27,13 +27,13 @@ class ReferenceKernel final : public Kernel {
       double* p = workspace + worker * g_.s;
       using Role = AttentionGeometry::Role;
       reference_attention_row(g_, g_.rows(call.inputs, Role::kQueries, image, head),
-                              g_.rows(call.inputs, Role::kKeys, image, head), t, p);
+                              g_.rows(call.inputs, Role::kKeys, image, head), head, t, p);
       const simd::HeadRows values = g_.rows(call.inputs, Role::kValues, image, head);
       float* out = call.output.data + (image * g_.t + t) * g_.c + head * g_.d;
       for (std::int64_t e = 0; e < g_.d; ++e) {
         double sum = 0.0;
         for (std::int64_t s = 0; s < g_.s; ++s) {
-          sum += p[s] * static_cast<double>(values.data[s * values.stride + e]);
+          sum += p[s] * static_cast<double>(values.row(s)[e]);
         }
         out[e] = static_cast<float>(sum);
       }
@@ -47,15 +47,17 @@ class ReferenceKernel final : public Kernel {
 }  // namespace
 
 void reference_attention_row(const AttentionGeometry& g, simd::HeadRows queries,
-                             simd::HeadRows keys, std::int64_t t, double* probabilities) {
+                             simd::HeadRows keys, std::int64_t head, std::int64_t t,
+                             double* probabilities) {
+  const float* bias = g.head_bias(head);
   double largest = -std::numeric_limits<double>::infinity();
   for (std::int64_t s = 0; s < g.s; ++s) {
     double score = 0.0;
     for (std::int64_t e = 0; e < g.d; ++e) {
-      score += static_cast<double>(queries.data[t * queries.stride + e]) *
-               static_cast<double>(keys.data[s * keys.stride + e]);
+      score += static_cast<double>(queries.row(t)[e]) * static_cast<double>(keys.row(s)[e]);
     }
     probabilities[s] = score * static_cast<double>(g.scale);
+    if (bias != nullptr) probabilities[s] += static_cast<double>(bias[t * g.s + s]);
     largest = std::max(largest, probabilities[s]);
   }
   double sum = 0.0;

@@ -28,7 +28,7 @@ class ReferenceKernel final : public Kernel {
       const std::int64_t image = task / g_.t / g_.heads;
       double* p = workspace + worker * g_.s;
       reference_attention_row(g_, g_.rows(call.inputs, Role::kQueries, image, head),
-                              g_.rows(call.inputs, Role::kKeys, image, head), task % g_.t, p);
+                              g_.rows(call.inputs, Role::kKeys, image, head), head, task % g_.t, p);
       float* out = call.output.data + (image * g_.t + task % g_.t) * g_.s * g_.heads + head;
       for (std::int64_t s = 0; s < g_.s; ++s) out[s * g_.heads] = static_cast<float>(p[s]);
     });
@@ -44,7 +44,7 @@ class BlockedKernel final : public Kernel {
  public:
   explicit BlockedKernel(const OpContext& context)
       : g_(context, false),
-        plan_(g_.t, g_.s, g_.d, g_.scale),
+        plan_(g_.t, g_.s, g_.d),
         zeros_(plan_.zero_floats()),
         head_bytes_(simd::aligned_floats_bytes(plan_.packed_key_floats())),
         scratch_bytes_(simd::aligned_floats_bytes(plan_.scratch_floats())),
@@ -82,7 +82,8 @@ class BlockedKernel final : public Kernel {
                      static_cast<std::size_t>(worker) * (scratch_bytes_ + stage_bytes_);
     auto* stage = reinterpret_cast<float*>(own + scratch_bytes_);
     plan_.weights_block(block, g_.rows(call.inputs, Role::kQueries, image, head),
-                        packed(call, head), zeros_.data(), reinterpret_cast<float*>(own), stage);
+                        packed(call, head), g_.terms(head), zeros_.data(),
+                        reinterpret_cast<float*>(own), stage);
     const std::int64_t first = plan_.first_row(block);
     const std::int64_t count = (plan_.first_row(block + 1) - first) * g_.s;
     float* out = call.output.data + (image * g_.t + first) * g_.s * g_.heads + head;
@@ -106,7 +107,7 @@ class AttentionWeights final : public Operator {
         .min_inputs = 1,
         .max_inputs = 2,
         .attributes = attention_attributes(),
-        .weights = {},
+        .weights = {attention_bias_spec()},
     };
     return contract;
   }

@@ -1,6 +1,7 @@
 #include "ops/batch_norm/batch_norm.h"
 
 #include <array>
+#include <cmath>
 
 namespace leadsman::ops {
 namespace {
@@ -32,7 +33,7 @@ class BatchNorm final : public Operator {
 
   Shape output_shape(const OpContext& context) const override {
     const Shape& input = context.inputs[0];
-    require_rank("input", input, {2, 4});
+    require_rank("input", input, {2, 3, 4});
     for (const WeightSpec& spec : contract().weights) {
       if (const Tensor* weight = context.weight(spec.role)) {
         require_shape(spec.role, weight->shape(), {channel_count(input)});
@@ -49,6 +50,24 @@ class BatchNorm final : public Operator {
   }
 
   bool takes_epilogue() const override { return true; }
+
+  // gamma (x - mean) / sqrt(variance + eps) + beta.
+  std::optional<ChannelAffine> affine(const OpContext& context) const override {
+    const Tensor* gamma = context.weight("weight");
+    const Tensor* beta = context.weight("bias");
+    const Tensor& mean = *context.weight("mean");
+    const Tensor& variance = *context.weight("variance");
+    const double eps = context.attributes.number("eps");
+    ChannelAffine affine;
+    for (std::int64_t c = 0; c < mean.elements(); ++c) {
+      const double factor = (gamma ? static_cast<double>(gamma->data()[c]) : 1.0) /
+                            std::sqrt(static_cast<double>(variance.data()[c]) + eps);
+      affine.factor.push_back(factor);
+      affine.summand.push_back((beta ? static_cast<double>(beta->data()[c]) : 0.0) -
+                               static_cast<double>(mean.data()[c]) * factor);
+    }
+    return affine;
+  }
 };
 
 }  // namespace

@@ -21,14 +21,14 @@ class Linear final : public Operator {
 
   Shape output_shape(const OpContext& context) const override {
     const Shape& input = context.inputs[0];
-    require_rank("input", input, {2, 3});
+    require_rank("input", input, {2, 3, 4});
     const Shape& weight = context.weight("weight")->shape();
     require_rank("weight", weight, {2});
     require_shape("weight", weight, {weight[0], channel_count(input)});
     if (const Tensor* bias = context.weight("bias")) {
       require_shape("bias", bias->shape(), {weight[0]});
     }
-    return input.with(input.rank() - 1, weight[0]);
+    return input.with(input.rank() == 3 ? 2 : 1, weight[0]);
   }
 
   Cost cost(const OpContext& context) const override {

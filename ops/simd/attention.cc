@@ -1,6 +1,7 @@
 #include "ops/simd/attention.h"
 
 #include <algorithm>
+#include <array>
 #include <cmath>
 #include <limits>
 
@@ -23,11 +24,10 @@ std::int64_t padded(std::int64_t count) {
 
 }  // namespace
 
-AttentionPlan::AttentionPlan(std::int64_t queries, std::int64_t keys, std::int64_t d, float scale)
+AttentionPlan::AttentionPlan(std::int64_t queries, std::int64_t keys, std::int64_t d)
     : queries_(queries),
       keys_(keys),
       d_(d),
-      scale_(scale),
       key_block_(keys <= kAllKeysAtOnce ? std::max<std::int64_t>(1, keys) : kKeyBlock) {
   const std::int64_t rows = std::clamp(kScoreFloats / key_block_, kMinRows, kMaxRows);
   blocks_ = std::max<std::int64_t>(1, (queries + rows - 1) / rows);
@@ -55,14 +55,13 @@ std::int64_t AttentionPlan::zero_floats() const {
 void AttentionPlan::pack_keys(HeadRows keys, float* packed) const {
   for (std::int64_t first = 0; first < keys_; first += kPanel) {
     const std::int64_t some = std::min(kPanel, keys_ - first);
-    const float* from = keys.data + first * keys.stride;
+    std::array<const float*, kPanel> rows;
+    for (std::int64_t i = 0; i < kPanel; ++i) {
+      rows[static_cast<std::size_t>(i)] = keys.row(first + std::min(i, some - 1));
+    }
     for (std::int64_t e = 0; e < d_; ++e) {
-      if (some == kPanel) {
-        for (std::int64_t i = 0; i < kPanel; ++i) packed[i] = from[i * keys.stride + e];
-      } else {
-        for (std::int64_t i = 0; i < some; ++i) packed[i] = from[i * keys.stride + e];
-        std::fill(packed + some, packed + kPanel, 0.0F);
-      }
+      for (std::size_t i = 0; i < rows.size(); ++i) packed[i] = rows[i][e];
+      if (some < kPanel) std::fill(packed + some, packed + kPanel, 0.0F);
       packed += kPanel;
     }
   }
@@ -75,7 +74,7 @@ void AttentionPlan::pack_values(HeadRows values, float* packed) const {
     for (std::int64_t first = 0; first < d_; first += kPanel) {
       const std::int64_t some = std::min(kPanel, d_ - first);
       for (std::int64_t key = begin; key < end; ++key) {
-        const float* from = values.data + key * values.stride + first;
+        const float* from = values.row(key) + first;
         if (some == kPanel) {  // of a fixed length: a few vector moves
           std::copy_n(from, kPanel, packed);
         } else {
@@ -87,16 +86,27 @@ void AttentionPlan::pack_values(HeadRows values, float* packed) const {
   }
 }
 
-void AttentionPlan::scale_queries(std::int64_t block, HeadRows queries, float* scaled) const {
+void AttentionPlan::scale_queries(std::int64_t block, HeadRows queries, float factor,
+                                  float* scaled) const {
   for (std::int64_t row = first_row(block); row < first_row(block + 1); ++row) {
-    scale_row(queries.data + row * queries.stride, scaled, d_, scale_);
+    scale_row(queries.row(row), scaled, d_, factor);
     scaled += d_;
   }
 }
 
+// To `count` scores of query `row` with the keys from `begin` on.
+void AttentionPlan::add_terms(std::int64_t row, std::int64_t begin, std::int64_t count,
+                              ScoreTerms terms, float* scores) const {
+  for (const float* term : {terms.bias, terms.mask}) {
+    if (term == nullptr) continue;
+    term += row * keys_ + begin;
+    for (std::int64_t i = 0; i < count; ++i) scores[i] += term[i];
+  }
+}
+
 void AttentionPlan::attend_block(std::int64_t block, HeadRows queries, const float* packed_keys,
-                                 const float* packed_values, const float* zeros, float* scratch,
-                                 float* out, std::int64_t out_stride) const {
+                                 const float* packed_values, ScoreTerms terms, const float* zeros,
+                                 float* scratch, HeadOutput out) const {
   const std::int64_t rows = first_row(block + 1) - first_row(block);
   const std::int64_t score_stride = padded(key_block_);
   float* scores = scratch;
@@ -104,7 +114,7 @@ void AttentionPlan::attend_block(std::int64_t block, HeadRows queries, const flo
   float* sums = scaled + block_rows_ * padded(d_);
   float* largest = sums + block_rows_ * padded(d_);
   float* total = largest + block_rows_;
-  scale_queries(block, queries, scaled);
+  scale_queries(block, queries, terms.factor, scaled);
   std::fill_n(largest, rows, -std::numeric_limits<float>::infinity());
   std::fill_n(total, rows, 0.0F);
 
@@ -124,7 +134,9 @@ void AttentionPlan::attend_block(std::int64_t block, HeadRows queries, const flo
 
     for (std::int64_t row = 0; row < rows; ++row) {
       const float before = largest[row];
-      const float sum = exponentiate_row(scores + row * score_stride, count, largest[row]);
+      float* row_scores = scores + row * score_stride;
+      add_terms(first_row(block) + row, begin, count, terms, row_scores);
+      const float sum = exponentiate_row(row_scores, count, largest[row]);
       if (begin == 0) {
         total[row] = sum;
         continue;
@@ -145,14 +157,15 @@ void AttentionPlan::attend_block(std::int64_t block, HeadRows queries, const flo
     matrix_product(product);
   }
   for (std::int64_t row = 0; row < rows; ++row) {
-    scale_row(sums + row * d_, out + (first_row(block) + row) * out_stride, d_, 1.0F / total[row]);
+    scale_row(sums + row * d_, out.row(first_row(block) + row), d_, 1.0F / total[row]);
   }
 }
 
 void AttentionPlan::weights_block(std::int64_t block, HeadRows queries, const float* packed_keys,
-                                  const float* zeros, float* scratch, float* weights) const {
+                                  ScoreTerms terms, const float* zeros, float* scratch,
+                                  float* weights) const {
   const std::int64_t rows = first_row(block + 1) - first_row(block);
-  scale_queries(block, queries, scratch);
+  scale_queries(block, queries, terms.factor, scratch);
   MatrixCall product;
   product.a = scratch;
   product.a_stride = d_;
@@ -165,6 +178,7 @@ void AttentionPlan::weights_block(std::int64_t block, HeadRows queries, const fl
   product.c_stride = keys_;
   matrix_product(product);
   for (std::int64_t row = 0; row < rows; ++row) {
+    add_terms(first_row(block) + row, 0, keys_, terms, weights + row * keys_);
     softmax_row(weights + row * keys_, weights + row * keys_, keys_);
   }
 }

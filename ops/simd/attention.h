@@ -4,8 +4,6 @@
 // memory is linear in the number of tokens.
 //
 // Keys and values are packed once a head (`pack`), then blocks of queries may run on any threads.
-// What later has to be added to the scores (a relative position bias, a mask) belongs between the
-// two products, in attend_block().
 #pragma once
 
 #include <cstddef>
@@ -13,16 +11,38 @@
 
 namespace leadsman::ops::simd {
 
-/// Rows of d neighbouring floats, `stride` floats apart.
+/// Rows of d neighbouring floats: `stride` floats apart, or, of a window in an image, where a table
+/// says.
 struct HeadRows {
   const float* data = nullptr;
   std::int64_t stride = 0;
+  const float* const* table = nullptr;  ///< when set, row i is at table[i] + offset
+  std::int64_t offset = 0;
+
+  const float* row(std::int64_t i) const { return table ? table[i] + offset : data + i * stride; }
+};
+
+/// The same, to be written.
+struct HeadOutput {
+  float* data = nullptr;
+  std::int64_t stride = 0;
+  float* const* table = nullptr;
+  std::int64_t offset = 0;
+
+  float* row(std::int64_t i) const { return table ? table[i] + offset : data + i * stride; }
+};
+
+/// What is done to the scores before the softmax: factor * q k^T + bias + mask.
+struct ScoreTerms {
+  float factor = 1.0F;
+  const float* bias = nullptr;  ///< [queries, keys] or none
+  const float* mask = nullptr;  ///< [queries, keys] or none
 };
 
 /// Sizes and buffers of one head.
 class AttentionPlan {
  public:
-  AttentionPlan(std::int64_t queries, std::int64_t keys, std::int64_t d, float scale);
+  AttentionPlan(std::int64_t queries, std::int64_t keys, std::int64_t d);
 
   /// Query blocks; how many there are does not depend on threads. Block b begins with query
   /// first_row(b) and holds at most block_rows() of them.
@@ -39,22 +59,23 @@ class AttentionPlan {
   void pack_keys(HeadRows keys, float* packed) const;
   void pack_values(HeadRows values, float* packed) const;
 
-  /// Rows of query block `block` of the attention's output, at out + row * out_stride.
+  /// Rows of query block `block` of the attention's output.
   void attend_block(std::int64_t block, HeadRows queries, const float* packed_keys,
-                    const float* packed_values, const float* zeros, float* scratch, float* out,
-                    std::int64_t out_stride) const;
+                    const float* packed_values, ScoreTerms terms, const float* zeros,
+                    float* scratch, HeadOutput out) const;
 
-  /// Rows of query block `block` of softmax(scale * q k^T), `keys` floats a row, side by side.
+  /// Rows of query block `block` of the softmax, `keys` floats a row, side by side.
   void weights_block(std::int64_t block, HeadRows queries, const float* packed_keys,
-                     const float* zeros, float* scratch, float* weights) const;
+                     ScoreTerms terms, const float* zeros, float* scratch, float* weights) const;
 
  private:
-  void scale_queries(std::int64_t block, HeadRows queries, float* scaled) const;
+  void scale_queries(std::int64_t block, HeadRows queries, float factor, float* scaled) const;
+  void add_terms(std::int64_t row, std::int64_t begin, std::int64_t count, ScoreTerms terms,
+                 float* scores) const;
 
   std::int64_t queries_;
   std::int64_t keys_;
   std::int64_t d_;
-  float scale_;
   std::int64_t key_block_;   ///< a multiple of a panel, or all keys
   std::int64_t block_rows_;  ///< the most rows of a block
   std::int64_t blocks_;

@@ -61,7 +61,7 @@ class Softmax final : public Operator {
   }
 
   Shape output_shape(const OpContext& context) const override {
-    require_rank("input", context.inputs[0], {2, 3});
+    require_rank("input", context.inputs[0], {2, 3, 4});
     return context.inputs[0];
   }
 

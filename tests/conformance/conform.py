@@ -40,7 +40,7 @@ def odd_size(name):
     """What an architecture allows beside its own size: transformers over patches want whole ones;
     MaxViT's windows divide every map."""
     if name.startswith("maxvit"):
-        return "448x224"
+        return "448x448"
     if name.startswith("vit_"):
         return "160x160" if name != "vit_h_14" else "238x238"
     return ODD
