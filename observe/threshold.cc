@@ -3,6 +3,8 @@
 #include <algorithm>
 #include <cmath>
 #include <map>
+#include <utility>
+#include <vector>
 
 #include "observe/single_layer.h"
 
@@ -61,27 +63,47 @@ double squared_products_gain(const Question& q) {
   return ratio_or_one(std::sqrt(total), norm(q.output));
 }
 
-// y = a x + b': two terms, where b' = beta - mean * a.
-double batch_norm_gain(const Question& q) {
+// Of value i in logical order: channels are the last axis but for images.
+std::int64_t channel_of(const Shape& shape, std::int64_t i) {
+  const std::int64_t inner = shape.rank() == 4 ? shape[2] * shape[3] : 1;
+  return i / inner % channel_count(shape);
+}
+
+// y = a x + b, a and b by channel: two terms.
+template <typename Map>
+double affine_gain(const Question& q, const Map& map_of_channel) {
   const Tensor& x = q.inputs[0];
-  const std::int64_t channels = x.shape()[1];
-  const std::int64_t area = x.elements() / (x.shape()[0] * channels);
-  const double eps = q.layer.attributes.number("eps");
+  const std::int64_t channels = channel_count(x.shape());
+  std::vector<std::pair<double, double>> maps;
+  for (std::int64_t c = 0; c < channels; ++c) maps.push_back(map_of_channel(c));
   double total = 0.0;
-  for (std::int64_t plane = 0; plane < x.shape()[0] * channels; ++plane) {
-    const std::int64_t c = plane % channels;
-    const auto at = [&](const char* role, double otherwise) {
-      const Tensor* w = q.weight(role);
-      return w ? static_cast<double>(w->data()[c]) : otherwise;
-    };
-    const double a = at("weight", 1.0) / std::sqrt(at("variance", 1.0) + eps);
-    const double b = at("bias", 0.0) - at("mean", 0.0) * a;
-    for (std::int64_t i = 0; i < area; ++i) {
-      const double ax = a * static_cast<double>(x.data()[plane * area + i]);
-      total += ax * ax + b * b;
-    }
+  for (std::int64_t i = 0; i < x.elements(); ++i) {
+    const auto [a, b] = maps[static_cast<std::size_t>(channel_of(x.shape(), i))];
+    const double ax = a * static_cast<double>(x.data()[i]);
+    total += ax * ax + b * b;
   }
   return ratio_or_one(std::sqrt(total), norm(q.output));
+}
+
+double at(const Question& q, const char* role, std::int64_t c, double otherwise) {
+  const Tensor* w = q.weight(role);
+  return w ? static_cast<double>(w->data()[c]) : otherwise;
+}
+
+double batch_norm_gain(const Question& q) {
+  const double eps = q.layer.attributes.number("eps");
+  return affine_gain(q, [&](std::int64_t c) {
+    const double a = at(q, "weight", c, 1.0) / std::sqrt(at(q, "variance", c, 1.0) + eps);
+    return std::pair(a, at(q, "bias", c, 0.0) - at(q, "mean", c, 0.0) * a);
+  });
+}
+
+double scale_gain(const Question& q) {
+  const double factor = q.layer.attributes.number("factor");
+  const double offset = q.layer.attributes.number("offset");
+  return affine_gain(q, [&](std::int64_t c) {
+    return std::pair(factor * at(q, "weight", c, 1.0), offset + at(q, "bias", c, 0.0));
+  });
 }
 
 // (x - mean) / std: what the mean takes away is lost.
@@ -121,39 +143,36 @@ double sum_gain(const Question& q) {
   return ratio_or_one(std::sqrt(squares), norm(q.output));
 }
 
-// An error of a score is one of an exponent: it counts by its absolute size, which is that of a
-// sum of d products q k * scale.
-double score_size(const Question& q) {
-  const double heads = static_cast<double>(q.layer.attributes.integer("heads"));
-  const bool joint = q.inputs.size() == 1;
-  const auto last = static_cast<double>(channel_count(q.inputs[0].shape()));
-  const double depth = (joint ? last / 3.0 : last) / heads;
-  const double given = q.layer.attributes.number("scale");
-  const double scale = given == 0.0 ? 1.0 / std::sqrt(depth) : given;
-  double query = rms(q.inputs[0]);
-  double key = query;
-  if (joint) {
-    const auto third = static_cast<std::int64_t>(last) / 3;
-    double q2 = 0.0;
-    double k2 = 0.0;
-    const std::int64_t positions = position_count(q.inputs[0].shape());
-    for (std::int64_t p = 0; p < positions; ++p) {
-      const float* row = q.inputs[0].data() + p * 3 * third;
-      for (std::int64_t c = 0; c < third; ++c) {
-        q2 += static_cast<double>(row[c]) * static_cast<double>(row[c]);
-        k2 += static_cast<double>(row[third + c]) * static_cast<double>(row[third + c]);
-      }
-    }
-    query = std::sqrt(q2 / static_cast<double>(positions * third));
-    key = std::sqrt(k2 / static_cast<double>(positions * third));
-  } else if (q.inputs.size() > 1) {
-    key = rms(q.inputs[1]);
+// Root mean square of channels [first, first + count).
+double channel_rms(const Tensor& x, std::int64_t first, std::int64_t count) {
+  double squares = 0.0;
+  for (std::int64_t i = 0; i < x.elements(); ++i) {
+    const std::int64_t c = channel_of(x.shape(), i);
+    if (c < first || c >= first + count) continue;
+    squares += static_cast<double>(x.data()[i]) * static_cast<double>(x.data()[i]);
   }
-  return depth * query * key * scale;  // sqrt(d) growth times the sqrt(d) products' root
+  const auto values = static_cast<double>(position_count(x.shape()) * count);
+  return std::sqrt(squares / std::max(1.0, values));
 }
 
+// An error of a score is one of an exponent: it counts by its absolute size, which is that of a
+// sum of d products q k * scale, and of the bias.
 double attention_gain(const Question& q) {
-  return std::max(1.0, score_size(q));
+  const bool joint = q.inputs.size() == 1;
+  const std::int64_t last = channel_count(q.inputs[0].shape());
+  const std::int64_t width = joint ? last / 3 : last;
+  const auto heads = static_cast<double>(q.layer.attributes.integer("heads"));
+  const double depth = static_cast<double>(width) / heads;
+  const double given = q.layer.attributes.number("scale");
+  const double scale = given == 0.0 ? 1.0 / std::sqrt(depth) : given;
+  const double query = channel_rms(q.inputs[0], 0, width);
+  const double key = joint ? channel_rms(q.inputs[0], width, width) : rms(q.inputs[1]);
+  // sqrt(d) growth times the sqrt(d) products' root.
+  double size = depth * query * key * scale;
+  if (q.layer.operator_name == "window_attention" && q.layer.attributes.flag("cosine")) size = 1.0;
+  if (const Tensor* factors = q.weight("head_scale")) size *= rms(*factors);
+  if (const Tensor* bias = q.weight("position_bias")) size += rms(*bias);
+  return std::max(1.0, size);
 }
 
 double shrink_gain(const Question& q) {
@@ -180,6 +199,8 @@ Gain gain_of(const std::string& op) {
       {"position_embed", shrink_gain},
       {"attention", attention_gain},
       {"attention_weights", attention_gain},
+      {"window_attention", attention_gain},
+      {"scale", scale_gain},
       {"activation", shrink_gain},
       {"select", select_gain},
   };

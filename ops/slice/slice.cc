@@ -13,8 +13,8 @@ bool along_tokens(const OpContext& context) {
   return context.attributes.text("axis") == "tokens";
 }
 
-// Rows of `in` floats, of which `out` from `start` on are kept: a position's channels, or all tokens
-// of an item.
+// Rows of `in` floats, of which `out` from `start` on are kept: a position's channels, or all
+// tokens of an item.
 class ReferenceKernel final : public Kernel {
  public:
   explicit ReferenceKernel(const OpContext& context) : start_(context.attributes.integer("start")) {

@@ -52,8 +52,9 @@ class SpaceToDepth final : public Operator {
   const Contract& contract() const override {
     static const Contract contract{
         .name = "space_to_depth",
-        .meaning = "blocks of positions as one position with all their channels (patch merging: "
-                   "Liu et al. 2021)",
+        .meaning =
+            "blocks of positions as one position with all their channels (patch merging: "
+            "Liu et al. 2021)",
         .min_inputs = 1,
         .max_inputs = 1,
         .attributes = {{.name = "block",

@@ -1,5 +1,5 @@
-// [N, H*W, C] as an image [N, C, H, W], the opposite of image_to_tokens: the same bytes. H and W are
-// those of the second input.
+// [N, H*W, C] as an image [N, C, H, W], the opposite of image_to_tokens: the same bytes. H and W
+// are those of the second input.
 #pragma once
 
 #include "ops/operator.h"

@@ -54,8 +54,9 @@ class WindowAttention final : public Operator {
   const Contract& contract() const override {
     static const Contract contract{
         .name = "window_attention",
-        .meaning = "multi-head attention within windows or grids of an image (Liu et al. 2021; Tu "
-                   "et al. 2022)",
+        .meaning =
+            "multi-head attention within windows or grids of an image (Liu et al. 2021; Tu "
+            "et al. 2022)",
         .min_inputs = 1,
         .max_inputs = 1,
         .attributes = window_attributes(),
@@ -111,8 +112,8 @@ WindowGeometry::WindowGeometry(const OpContext& context) {
   cosine = context.attributes.flag("cosine");
   const double given = context.attributes.number("scale");
   scale = given == 0.0 ? 1.0 / std::sqrt(static_cast<double>(d)) : given;
-  if (grid && (height % window_height != 0 || width % window_width != 0 ||
-               shift_down + shift_right != 0)) {
+  if (grid &&
+      (height % window_height != 0 || width % window_width != 0 || shift_down + shift_right != 0)) {
     throw_input("a grid of " + std::to_string(window_height) + " x " +
                 std::to_string(window_width) + " does not divide a map of " +
                 std::to_string(height) + " x " + std::to_string(width) + ", or is shifted");

@@ -8,8 +8,8 @@
 // The map is padded at the bottom and the right to whole windows; q, k, v of the padding are the
 // weight `padding` (a projection's bias), and its results are dropped. With a shift, windows begin
 // `shift` positions further along each axis, wrap around, and the regions that this brings together
-// are told apart by the -100. An axis that one window covers is not shifted. On a grid, positions of
-// an attention are H / h rows and W / w columns apart.
+// are told apart by the -100. An axis that one window covers is not shifted. On a grid, positions
+// of an attention are H / h rows and W / w columns apart.
 #pragma once
 
 #include <cstdint>
@@ -48,8 +48,8 @@ struct WindowGeometry {
 /// [3C]: q, k and v of the padding.
 std::vector<float> padding_row(const OpContext& context);
 
-constexpr double kMaskedScore = -100.0;    ///< added between regions: Liu et al.'s own number
-constexpr double kSmallestNorm = 1e-12;    ///< below it, cosine attention divides by this
+constexpr double kMaskedScore = -100.0;  ///< added between regions: Liu et al.'s own number
+constexpr double kSmallestNorm = 1e-12;  ///< below it, cosine attention divides by this
 
 const Operator& window_attention_operator();
 

@@ -42,8 +42,9 @@ def write_safetensors(path, tensors, metadata):
 
 
 class Cases:
-    def __init__(self, operator):
-        self.operator = operator
+    def __init__(self, operator, more=None):
+        """`more` names a file of its own beside the operator's."""
+        self.file = f"{operator}+{more}" if more else operator
         self.tensors = {}
         self.metadata = {}
 
@@ -71,7 +72,7 @@ class Cases:
     def write(self):
         FOLDER.mkdir(parents=True, exist_ok=True)
         self.metadata["library"] = f"PyTorch {torch.__version__}"
-        path = FOLDER / f"{self.operator}.safetensors"
+        path = FOLDER / f"{self.file}.safetensors"
         write_safetensors(path, self.tensors, self.metadata)
         return path.stat().st_size
 

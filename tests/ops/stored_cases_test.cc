@@ -14,8 +14,20 @@ namespace {
 
 // Operators that move values, or round the exact result of one operation once.
 bool is_exact(std::string_view op) {
-  constexpr std::array kExact{"class_token",     "concat",   "flatten", "identity",
-                              "image_to_tokens", "max_pool", "mul",     "select"};
+  constexpr std::array kExact{"channel_shuffle",
+                              "class_token",
+                              "concat",
+                              "features_to_image",
+                              "flatten",
+                              "identity",
+                              "image_to_tokens",
+                              "max_pool",
+                              "mul",
+                              "select",
+                              "slice",
+                              "space_to_depth",
+                              "tokens_to_image",
+                              "transpose"};
   return std::ranges::find(kExact, op) != kExact.end();
 }
 

@@ -1,5 +1,7 @@
 #include "tests/support/operator_cases.h"
 
+#include <filesystem>
+
 #include <nlohmann/json.hpp>
 
 #include "leadsman/error.h"
@@ -45,15 +47,19 @@ StoredCase read_case(const TensorFile& file, std::string_view op, const std::str
 }  // namespace
 
 std::vector<StoredCase> stored_cases(std::string_view op) {
-  const TensorFile file =
-      TensorFile::open(std::string(LEADSMAN_SOURCE_DIR) + "/tests/data/operators/" +
-                       std::string(op) + ".safetensors");
+  const std::string name(op);
   std::vector<StoredCase> cases;
-  for (const auto& [name, text] : file.metadata()) {
-    if (name == "library") continue;
-    cases.push_back(read_case(file, op, name, Json::parse(text)));
+  for (const auto& entry : std::filesystem::directory_iterator(std::string(LEADSMAN_SOURCE_DIR) +
+                                                               "/tests/data/operators")) {
+    const std::string stem = entry.path().stem().string();
+    if (stem != name && !stem.starts_with(name + "+")) continue;
+    const TensorFile file = TensorFile::open(entry.path().string());
+    for (const auto& [label, text] : file.metadata()) {
+      if (label == "library") continue;
+      cases.push_back(read_case(file, op, label, Json::parse(text)));
+    }
   }
-  if (cases.empty()) throw_input("no cases for " + std::string(op));
+  if (cases.empty()) throw_input("no cases for " + name);
   return cases;
 }
 

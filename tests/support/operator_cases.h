@@ -1,5 +1,5 @@
 // Operator cases as PyTorch computed them, stored in tests/data/operators/ by
-// tests/ops/make_operator_cases.py.
+// tests/ops/make_operator_cases.py and make_arrangement_cases.py.
 #pragma once
 
 #include <string>
@@ -16,7 +16,8 @@ struct StoredCase {
   Tensor expected;
 };
 
-/// Every case of the operator's file. Throws Error(kInput) when there is no such file.
+/// Every case of the operator's files, NAME.safetensors and NAME+WHAT.safetensors. Throws
+/// Error(kInput) when there are none.
 std::vector<StoredCase> stored_cases(std::string_view op);
 
 }  // namespace leadsman::testing

@@ -69,11 +69,28 @@ RIGHT = {
         "position_embed", ["t", "i"], attributes={"prefix_tokens": 0}, weights={"weight": "w"}
     ),
     "attention": layer("attention", ["q", "k", "v"], attributes={"heads": 3, "scale": 0.5}),
-    "attention_weights": layer("attention_weights", ["q", "k"], attributes={"heads": 3}),
+    "attention_weights": layer(
+        "attention_weights", ["q", "k"], attributes={"heads": 3}, weights={"position_bias": "p"}
+    ),
     "select": layer("select", attributes={"index": 0}),
     "mean": layer("mean", attributes={"keep": True}),
     "softmax": layer("softmax", attributes={}, weights={}),
     "identity": layer("identity"),
+    "scale": layer(
+        "scale", attributes={"factor": 2, "offset": -0.5}, weights={"weight": "w", "bias": "b"}
+    ),
+    "slice": layer("slice", attributes={"axis": "tokens", "start": 1, "count": 0}),
+    "channel_shuffle": layer("channel_shuffle", attributes={"groups": 2}),
+    "features_to_image": layer("features_to_image"),
+    "tokens_to_image": layer("tokens_to_image", ["t", "i"]),
+    "transpose": layer("transpose"),
+    "space_to_depth": layer("space_to_depth", attributes={"block": [2, 2], "order": "rows"}),
+    "window_attention": layer(
+        "window_attention",
+        attributes={"heads": 2, "window": [7, 7], "shift": [3, 0], "arrangement": "window",
+                    "scale": 0.1, "cosine": False},
+        weights={"position_bias": "p", "head_scale": "h", "padding": "b"},
+    ),
 }  # fmt: skip
 
 GRAPH = {
