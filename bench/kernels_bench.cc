@@ -20,10 +20,11 @@
 
 #include <benchmark/benchmark.h>
 
-#include "bench/peak.h"
+#include "core/threads.h"
 #include "leadsman/error.h"
 #include "ops/operator.h"
 #include "ops/simd/aligned.h"
+#include "ops/simd/peak.h"
 #include "ops/simd/target.h"
 
 namespace leadsman::bench {
@@ -88,14 +89,15 @@ void run_layer(benchmark::State& state, const Layer& layer) {
 
   std::size_t next = 0;
   std::vector<double> seconds;
-  double peak = measure_peak(thread_count);
+  const KeepAwake awake(thread_count, std::chrono::microseconds(200));
+  double peak = ops::simd::measure_peak(thread_count);
   for (auto _ : state) {
-    const double begin = now(thread_count);
+    const double begin = ops::simd::now(thread_count);
     kernels[next]->run(call);
-    seconds.push_back(now(thread_count) - begin);
+    seconds.push_back(ops::simd::now(thread_count) - begin);
     next = (next + 1) % kernels.size();
   }
-  peak = std::max(peak, measure_peak(thread_count));
+  peak = std::max(peak, ops::simd::measure_peak(thread_count));
   std::sort(seconds.begin(), seconds.end());
   const double flops = 2.0 * static_cast<double>(op.cost(context).macs);
   state.counters["best"] = flops / seconds.front() / peak;

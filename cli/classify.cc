@@ -11,6 +11,7 @@
 #include "leadsman/tensor_file.h"
 #include "options.h"
 #include "pictures.h"
+#include "profile_text.h"
 #include "text.h"
 
 namespace leadsman::cli {
@@ -21,6 +22,7 @@ struct ClassifyOptions {
   std::vector<std::string> pictures;
   std::string tensor;
   int top = 3;
+  bool profile = false;
   bool json = false;
 };
 
@@ -65,6 +67,7 @@ class Classifier {
     if (!options_.tensor.empty()) {
       if (!options_.pictures.empty()) throw_usage("give pictures or --tensor, not both");
       classify_tensor();
+      print_profile_if_asked();
       return 0;
     }
     if (options_.pictures.empty()) throw_usage("give at least one picture, folder, or -");
@@ -91,6 +94,7 @@ class Classifier {
       progress.clear();
       print(pictures[i], 0);
     }
+    print_profile_if_asked();
     if (bad == 0) return 0;
     std::cerr << "leadsman: " << bad << " of " << pictures.size()
               << " pictures could not be read\n";
@@ -123,8 +127,24 @@ class Classifier {
         throw_input(options_.model.bundle + ": " + std::to_string(model_.labels.size()) +
                     " labels for " + std::to_string(scores[1]) + " classes");
       }
+      if (options_.profile) {
+        runner_->run(input);  // the first touches memory that the others find warm
+        runner_->enable_profile(true);
+      }
     }
     runner_->run(input);
+  }
+
+  void print_profile_if_asked() const {
+    if (!options_.profile || runner_ == nullptr) return;
+    const double peak = measure_peak(runner_->plan().threads());
+    if (options_.json) {
+      const Json line = {{"profile", profile_json(runner_->plan(), runner_->profile(), peak)}};
+      std::cout << line.dump() << std::endl;
+    } else {
+      std::cout << '\n';
+      print_profile(std::cout, runner_->plan(), runner_->profile(), peak);
+    }
   }
 
   void print(const std::string& picture, std::int64_t n) const {
@@ -189,6 +209,8 @@ Command add_classify(CLI::App& app) {
   command->add_option("--top", options->top, "Labels a picture")
       ->check(CLI::Range(1, 1000000))
       ->type_name("K");
+  command->add_flag("--profile", options->profile,
+                    "Then show the time, work and rate of every step");
   command->add_flag("--json", options->json, "One JSON object a line");
   command->footer(
       "Example: leadsman classify examples/buttons/bundles/conv examples/buttons/pictures/odd\n"

@@ -14,5 +14,6 @@ Command add_describe(CLI::App& app);
 Command add_classify(CLI::App& app);
 Command add_tap(CLI::App& app);
 Command add_verify(CLI::App& app);
+Command add_time(CLI::App& app);
 
 }  // namespace leadsman::cli

@@ -107,7 +107,7 @@ void print_totals(const Bundle& model, const Plan& plan) {
   line("planned peak memory", bytes_text(static_cast<double>(plan.peak_bytes())));
   line("  activations", bytes_text(static_cast<double>(plan.arena_bytes())));
   line("  workspace", bytes_text(static_cast<double>(plan.workspace_bytes())) + " for " +
-                          std::to_string(plan.threads()) + " threads");
+                          counted(plan.threads(), "thread"));
   line("  weights", bytes_text(static_cast<double>(plan.weight_bytes() + plan.packed_bytes())));
 }
 

@@ -37,6 +37,7 @@ int main(int argc, char** argv) {
   add(leadsman::cli::add_classify);
   add(leadsman::cli::add_tap);
   add(leadsman::cli::add_verify);
+  add(leadsman::cli::add_time);
 
   try {
     app.parse(argc, argv);

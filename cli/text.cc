@@ -42,19 +42,26 @@ std::string grouped(std::int64_t value) {
   return text;
 }
 
+std::string counted(std::int64_t count, const std::string& noun) {
+  return grouped(count) + " " + noun + (count == 1 ? "" : "s");
+}
+
 std::string digits(double value, int digits) {
   std::array<char, 64> buffer{};
   std::snprintf(buffer.data(), buffer.size(), "%.*g", digits, value);
   return buffer.data();
 }
 
+std::string fixed(double value, int decimals) {
+  std::array<char, 64> buffer{};
+  std::snprintf(buffer.data(), buffer.size(), "%.*f", decimals, value);
+  return buffer.data();
+}
+
 namespace {
 
 std::string three_digits(double value) {
-  std::array<char, 64> buffer{};
-  const int decimals = value >= 99.95 ? 0 : value >= 9.995 ? 1 : 2;
-  std::snprintf(buffer.data(), buffer.size(), "%.*f", decimals, value);
-  return buffer.data();
+  return fixed(value, value >= 99.95 ? 0 : value >= 9.995 ? 1 : 2);
 }
 
 std::string with_unit(double value, double base, const std::array<const char*, 5>& units) {

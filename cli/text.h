@@ -18,6 +18,8 @@ std::string emphasize(const std::string& text);
 
 /// "11,689,512"
 std::string grouped(std::int64_t value);
+/// "1 run", "50 runs"
+std::string counted(std::int64_t count, const std::string& noun);
 /// Three significant digits with a unit: "1.81 G", "3.50 M", "640".
 std::string scaled(double value);
 /// "44.6 MiB", "640 B"
@@ -26,6 +28,8 @@ std::string bytes_text(double bytes);
 std::string shape_text(const std::vector<std::int64_t>& sizes);
 /// printf("%.*g") with `digits` significant digits.
 std::string digits(double value, int digits);
+/// printf("%.*f") with `decimals` digits behind the point.
+std::string fixed(double value, int decimals);
 /// The end of `text`, which tells layers and files apart, in `width` characters.
 std::string shortened(const std::string& text, std::size_t width);
 

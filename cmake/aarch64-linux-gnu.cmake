@@ -6,10 +6,6 @@ set(CMAKE_C_COMPILER aarch64-linux-gnu-gcc)
 set(CMAKE_CXX_COMPILER aarch64-linux-gnu-g++)
 set(CMAKE_EXE_LINKER_FLAGS_INIT -static)
 
-execute_process(COMMAND ${CMAKE_CXX_COMPILER} -print-file-name=libgomp.a
-                OUTPUT_VARIABLE static_gomp OUTPUT_STRIP_TRAILING_WHITESPACE)
-set(OpenMP_gomp_LIBRARY ${static_gomp} CACHE FILEPATH "The static one: the binary is static")
-
 find_program(LEADSMAN_QEMU qemu-aarch64-static)
 if(LEADSMAN_QEMU)
   # The oldest kind of core: code for a newer one would stop with an illegal instruction.

@@ -39,4 +39,4 @@ needs_tests="$needs_tests python3-scipy python3-sklearn python3-jsonschema"
 # The cross build for Arm boards, and what runs it here.
 needs_board="g++-aarch64-linux-gnu qemu-user-static googletest python3"
 # The other compiler and the checkers.
-needs_checks="clang-14 libomp-14-dev clang-tidy-14 clang-format-14 python3"
+needs_checks="clang-14 clang-tidy-14 clang-format-14 python3"

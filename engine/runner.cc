@@ -4,6 +4,7 @@
 #include <chrono>
 #include <new>
 
+#include "core/threads.h"
 #include "engine/plan_state.h"
 #include "leadsman/error.h"
 #include "leadsman/names.h"
@@ -30,7 +31,7 @@ AlignedBytes allocate(std::size_t bytes, const char* what) {
 
 using Clock = std::chrono::steady_clock;
 
-void record(StepTime& time, Clock::duration elapsed) {
+void record(PartTime& time, Clock::duration elapsed) {
   const double seconds = std::chrono::duration<double>(elapsed).count();
   time.best_seconds = time.runs == 0 ? seconds : std::min(time.best_seconds, seconds);
   time.total_seconds += seconds;
@@ -116,6 +117,7 @@ void Runner::run(std::span<const Tensor> inputs) {
                 std::to_string(inputs.size()));
   }
   const Clock::time_point begin = Clock::now();
+  const KeepAwake awake(p.options.threads, p.options.spin);
   for (std::size_t i = 0; i < inputs.size(); ++i) {
     if (!(inputs[i].shape() == p.input_shapes[i])) {
       throw_usage("input '" + p.input_names[i] + "' has shape " + inputs[i].shape().to_string() +
@@ -123,6 +125,7 @@ void Runner::run(std::span<const Tensor> inputs) {
     }
     copy_from_logical(inputs[i].data(), s.values[i]);
   }
+  if (s.profiling) record(s.profile.input, Clock::now() - begin);
   for (std::size_t i = 0; i < p.steps.size(); ++i) {
     const internal::Step& step = p.steps[i];
     if (step.is_view) continue;

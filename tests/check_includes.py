@@ -41,8 +41,8 @@ ROOM_OF_HEADER = {name: room for room, names in HEADERS.items() for name in name
 
 # Libraries of others: what the include begins with, and where alone it may stand.
 LIBRARIES = {
-    "omp.h": ["core/threads.cc"],
-    "hwy/": ["ops/simd/", "tests/ops/simd/", "bench/"],
+    "thread": ["core/threads.cc", "tests/"],
+    "hwy/": ["ops/simd/", "tests/ops/simd/"],
     "CLI/": ["cli/"],
     "nlohmann/": ["loaders/", "observe/", "cli/", "examples/", "tests/", "bench/"],
     "stb/": ["loaders/"],
@@ -139,7 +139,7 @@ def self_test():
         "core/a.cc": '#include "ops/operator.h"\n',
         "ops/b.cc": '#include "leadsman/plan.h"\n',
         "ops/add/b.cc": "#include <hwy/highway.h>\n",
-        "engine/c.cc": "#include <omp.h>\n",
+        "engine/c.cc": "#include <thread>\n",
         "engine/c2.cc": '#include "leadsman/bundle.h"\n',
         "loaders/d.cc": '#include "leadsman/compare.h"\n',
         "loaders/d2.cc": '#include "observe/threshold.h"\n',
@@ -156,7 +156,7 @@ def self_test():
         "core/long.cc": "\n" * (MOST_LINES + 1),
     }
     right = {
-        "core/threads.cc": "#include <omp.h>\n#include <vector>\n",
+        "core/threads.cc": "#include <thread>\n#include <vector>\n",
         "ops/simd/a.cc": '#include "hwy/highway.h"\n#include "ops/operator.h"\n',
         "engine/a.cc": '#include "core/threads.h"\n#include "ops/operator.h"\n',
         "loaders/a.cc": '#include "leadsman/graph.h"\n#include <stb/stb_image.h>\n',

@@ -34,8 +34,8 @@ std::string best_label(const leadsman::Bundle& bundle, const leadsman::ConstTens
 
 /// The step that took most of the time.
 std::string slowest_step(const leadsman::Runner& runner) {
-  const std::vector<leadsman::StepTime>& times = runner.profile().steps;
-  const auto slowest = std::ranges::max_element(times, {}, &leadsman::StepTime::total_seconds);
+  const std::vector<leadsman::PartTime>& times = runner.profile().steps;
+  const auto slowest = std::ranges::max_element(times, {}, &leadsman::PartTime::total_seconds);
   const leadsman::StepSummary& step =
       runner.plan().steps()[static_cast<std::size_t>(slowest - times.begin())];
   char text[128];

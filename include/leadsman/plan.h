@@ -4,6 +4,7 @@
 // lies in the arena. A Plan is immutable; any number of Runners on any threads may share one.
 #pragma once
 
+#include <chrono>
 #include <cstddef>
 #include <memory>
 #include <string>
@@ -18,6 +19,9 @@ struct PlanOptions {
   std::vector<Shape> input_shapes;
   /// 0: all the CPUs that the process may use.
   int threads = 0;
+  /// How long threads may spin, from one step of a run to the next, before they sleep; between runs
+  /// they always sleep. 0 saves power and costs speed: waking a thread takes tens of microseconds.
+  std::chrono::microseconds spin{200};
   /// True: the plain reference kernels only, one step a layer, nothing fused: the oracle.
   bool reference_kernels = false;
   /// Layers (names or globs) whose outputs hooks will ask for. Fusion is cut after these layers

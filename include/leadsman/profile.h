@@ -1,21 +1,31 @@
-// Where the time of a run goes.
+// Where the time of a run goes, and what the machine could do.
 #pragma once
 
 #include <cstdint>
+#include <string>
 #include <vector>
 
 namespace leadsman {
 
-struct StepTime {
+struct PartTime {
   std::int64_t runs = 0;
   double total_seconds = 0.0;
   double best_seconds = 0.0;
 };
 
-/// Indexed as Plan::steps(); `whole` is the run from input to output.
+/// Each figure but `whole` takes two readings of the clock a run. What `whole` holds beside the
+/// others is the plan itself: walking its steps, hooks, and reading the clock.
 struct Profile {
-  std::vector<StepTime> steps;
-  StepTime whole;
+  std::vector<PartTime> steps;  ///< indexed as Plan::steps()
+  PartTime input;               ///< inputs from logical to memory order
+  PartTime whole;               ///< from input to output
 };
+
+/// FLOP/s (two a multiply-add) that `threads` threads reach together in registers, with the
+/// instruction set in use: the best of some 20 ms.
+double measure_peak(int threads);
+
+/// The instruction set in use: "avx512", "avx2", "sse4", "neon" or "portable".
+std::string instruction_set();
 
 }  // namespace leadsman

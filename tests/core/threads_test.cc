@@ -1,6 +1,8 @@
 #include "core/threads.h"
 
 #include <atomic>
+#include <chrono>
+#include <ctime>
 #include <numeric>
 #include <thread>
 #include <vector>
@@ -71,6 +73,22 @@ TEST_P(ParallelFor, WorksAgainAfterwards) {
   }
 }
 
+// Calls of every size in turn, so that helpers come and go while others are at work.
+TEST_P(ParallelFor, LosesNoTaskAmongManyShortCalls) {
+  for (const bool spins : {false, true}) {
+    const KeepAwake awake(spins ? GetParam() : 1, std::chrono::microseconds(100));
+    std::vector<std::atomic<int>> runs(64);
+    for (int call = 0; call < 3000; ++call) {
+      const int tasks = 1 + call * 7 % 64;
+      parallel_for(GetParam() - call % 2, tasks,
+                   [&](std::int64_t task, int) { ++runs[static_cast<std::size_t>(task)]; });
+      for (int task = 0; task < tasks; ++task) {
+        ASSERT_EQ(runs[static_cast<std::size_t>(task)].exchange(0), 1);
+      }
+    }
+  }
+}
+
 INSTANTIATE_TEST_SUITE_P(Threads, ParallelFor, ::testing::Values(1, 2, 3, 16),
                          ::testing::PrintToStringParamName());
 
@@ -88,6 +106,49 @@ TEST(ParallelFor, ServesSeveralCallersAtOnce) {
   }
   for (std::thread& caller : callers) caller.join();
   for (const std::int64_t sum : sums) EXPECT_EQ(sum, 499 * 500 * 999 / 6);
+}
+
+double process_seconds() {
+  timespec time{};
+  clock_gettime(CLOCK_PROCESS_CPUTIME_ID, &time);
+  return static_cast<double>(time.tv_sec) + 1e-9 * static_cast<double>(time.tv_nsec);
+}
+
+TEST(KeepAwake, ItsHelpersSleepAfterwards) {
+  {
+    const KeepAwake awake(4, std::chrono::seconds(10));
+    parallel_for(4, 8, [](std::int64_t, int) {});
+  }
+  const double before = process_seconds();
+  std::this_thread::sleep_for(std::chrono::milliseconds(100));
+  EXPECT_LT(process_seconds() - before, 0.05);
+}
+
+TEST(KeepAwake, HelpersSleepWhenTheirTimeIsOver) {
+  const KeepAwake awake(2, std::chrono::milliseconds(1));
+  parallel_for(2, 8, [](std::int64_t, int) {});
+  const double before = process_seconds();
+  std::this_thread::sleep_for(std::chrono::milliseconds(100));
+  EXPECT_LT(process_seconds() - before, 0.05);
+}
+
+TEST(KeepAwake, NestsAndServesCallersOnManyThreads) {
+  std::atomic<int> sum{0};
+  std::vector<std::thread> callers;
+  for (int caller = 0; caller < 4; ++caller) {
+    callers.emplace_back([&sum] {
+      const KeepAwake outer(3, std::chrono::microseconds(50));
+      for (int round = 0; round < 50; ++round) {
+        const KeepAwake inner(2, std::chrono::microseconds(50));
+        parallel_for(3, 10, [&](std::int64_t, int) {
+          const KeepAwake inside(2, std::chrono::microseconds(50));
+          ++sum;
+        });
+      }
+    });
+  }
+  for (std::thread& caller : callers) caller.join();
+  EXPECT_EQ(sum.load(), 4 * 50 * 10);
 }
 
 }  // namespace

@@ -1,4 +1,4 @@
-#include "bench/peak.h"
+#include "ops/simd/peak.h"
 
 #include <algorithm>
 #include <atomic>
@@ -9,12 +9,12 @@
 #include "ops/simd/wanted_targets.h"
 
 #undef HWY_TARGET_INCLUDE
-#define HWY_TARGET_INCLUDE "bench/peak.cc"
+#define HWY_TARGET_INCLUDE "ops/simd/peak.cc"
 #include "hwy/foreach_target.h"
 #include "hwy/highway.h"
 
 HWY_BEFORE_NAMESPACE();
-namespace leadsman::bench::HWY_NAMESPACE {
+namespace leadsman::ops::simd::HWY_NAMESPACE {
 
 namespace hn = hwy::HWY_NAMESPACE;
 
@@ -52,11 +52,11 @@ float multiply_adds(std::int64_t steps, std::int64_t& flops) {
   return hn::GetLane(sum);
 }
 
-}  // namespace leadsman::bench::HWY_NAMESPACE
+}  // namespace leadsman::ops::simd::HWY_NAMESPACE
 HWY_AFTER_NAMESPACE();
 
 #if HWY_ONCE
-namespace leadsman::bench {
+namespace leadsman::ops::simd {
 
 HWY_EXPORT(multiply_adds);
 
@@ -84,5 +84,5 @@ double measure_peak(int threads) {
   return best;
 }
 
-}  // namespace leadsman::bench
+}  // namespace leadsman::ops::simd
 #endif  // HWY_ONCE
