@@ -132,6 +132,28 @@ double layer_norm_gain(const Question& q) {
   return std::max(1.0, std::sqrt(total / std::max(1.0, static_cast<double>(positions))));
 }
 
+// The same over groups of channels, which lie side by side in logical order.
+double group_norm_gain(const Question& q) {
+  const Tensor& x = q.inputs[0];
+  const std::int64_t groups = x.shape()[0] * q.layer.attributes.integer("groups");
+  const std::int64_t count = x.elements() / std::max<std::int64_t>(1, groups);
+  double total = 0.0;
+  for (std::int64_t g = 0; g < groups; ++g) {
+    double sum = 0.0;
+    double squares = 0.0;
+    for (std::int64_t i = g * count; i < (g + 1) * count; ++i) {
+      const double value = static_cast<double>(x.data()[i]);
+      sum += value;
+      squares += value * value;
+    }
+    const double mean = sum / static_cast<double>(count);
+    const double mean_square = squares / static_cast<double>(count);
+    const double variance = std::max(mean_square - mean * mean, q.layer.attributes.number("eps"));
+    total += mean_square / variance;
+  }
+  return std::max(1.0, std::sqrt(total / std::max(1.0, static_cast<double>(groups))));
+}
+
 // The mean of K values of either sign.
 double mean_gain(const Question& q) {
   return ratio_or_one(rms(q.inputs[0]) / std::sqrt(q.reduction), rms(q.output));
@@ -201,6 +223,8 @@ Gain gain_of(const std::string& op) {
       {"attention_weights", attention_gain},
       {"window_attention", attention_gain},
       {"scale", scale_gain},
+      {"group_norm", group_norm_gain},
+      {"resize", shrink_gain},
       {"activation", shrink_gain},
       {"select", select_gain},
   };

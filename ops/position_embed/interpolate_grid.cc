@@ -2,6 +2,7 @@
 #include <array>
 #include <cmath>
 
+#include "ops/cubic.h"
 #include "ops/position_embed/position_embed.h"
 
 namespace leadsman::ops {
@@ -12,15 +13,6 @@ struct Taps {
   std::array<std::int64_t, 4> index;
   std::array<double, 4> weight;
 };
-
-// Keys 1981, equation 4, at distance |d| from a neighbour.
-double cubic(double d) {
-  constexpr double kA = -0.75;
-  d = std::abs(d);
-  if (d <= 1.0) return ((kA + 2.0) * d - (kA + 3.0)) * d * d + 1.0;
-  if (d < 2.0) return ((kA * d - 5.0 * kA) * d + 8.0 * kA) * d - 4.0 * kA;
-  return 0.0;
-}
 
 std::vector<Taps> axis_taps(std::int64_t from, std::int64_t to) {
   std::vector<Taps> taps(static_cast<std::size_t>(to));
@@ -33,7 +25,7 @@ std::vector<Taps> axis_taps(std::int64_t from, std::int64_t to) {
     for (std::size_t k = 0; k < 4; ++k) {
       const std::int64_t neighbour = base - 1 + static_cast<std::int64_t>(k);
       t.index[k] = std::clamp<std::int64_t>(neighbour, 0, from - 1);
-      t.weight[k] = cubic(place - static_cast<double>(neighbour));
+      t.weight[k] = keys_cubic(place - static_cast<double>(neighbour));
     }
   }
   return taps;

@@ -11,6 +11,7 @@ threshold in isolated mode, and the relative L2 error of the logits from a fused
 """
 
 import argparse
+import contextlib
 import dataclasses
 import json
 import os
@@ -82,11 +83,29 @@ def parse_size(text):
     return tuple(int(side) for side in text.split("x"))
 
 
+@contextlib.contextmanager
+def quick_initialisation():
+    """Truncated normals by clamping: torch's inverse error function takes minutes for some."""
+    from torch.nn import init
+
+    def clamped(tensor, mean=0.0, std=1.0, a=-2.0, b=2.0):
+        init.normal_(tensor, mean, std).detach().clamp_(a, b)
+        return tensor
+
+    slow, init.trunc_normal_ = init.trunc_normal_, clamped
+    try:
+        yield
+    finally:
+        init.trunc_normal_ = slow
+
+
 def export_torchvision(name, folder, size=None):
     """Writes the bundle; returns how many parameters its graph should have."""
     import leadsman_export
 
-    module, preprocess = leadsman_export.torchvision_model(name, size and parse_size(size), seed=1)
+    size = size and parse_size(size)
+    with quick_initialisation():
+        module, preprocess = leadsman_export.torchvision_model(name, size, seed=1)
     leadsman_export.settle(module, preprocess["crop"], seed=1)
     example = leadsman_export.picture_like(1, *preprocess["crop"], seed=2)
     summary = leadsman_export.export(module, example, folder, preprocess=preprocess, name=name)

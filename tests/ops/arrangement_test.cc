@@ -33,8 +33,8 @@ TEST(ScaleRows, AgreesWithTheReferenceOnRandomShapes) {
   for (int i = 0; i < 30; ++i) {
     const std::int64_t channels = random.integer(1, 70);
     OpCase c{.op = "scale",
-             .inputs = {random.tensor({random.integer(1, 2), channels, random.integer(1, 9),
-                                       random.integer(1, 9)})}};
+             .inputs = {random.tensor(
+                 {random.integer(1, 2), channels, random.integer(1, 9), random.integer(1, 9)})}};
     c.attributes.set("factor", random.uniform(-2.0, 2.0));
     c.attributes.set("offset", random.uniform(-1.0, 1.0));
     if (random.coin()) c.weights["weight"] = random.tensor({channels, 1, 1});
@@ -87,9 +87,9 @@ TEST(Arrangements, SayWhatDoesNotMeet) {
             "groups is 3, which does not divide 8 channels");
   EXPECT_EQ(refusal_of(with("slice", {{1, 4, 2, 2}}, {{"start", three}, {"count", two}})),
             "start is 3 and count 2, but input of shape [1, 4, 2, 2] has 4 channels");
-  EXPECT_EQ(refusal_of(with("slice", {{1, 2, 5}}, {{"axis", std::string("tokens")},
-                                                   {"start", two}})),
-            "start is 2 and count 0, but input of shape [1, 2, 5] has 2 tokens");
+  EXPECT_EQ(
+      refusal_of(with("slice", {{1, 2, 5}}, {{"axis", std::string("tokens")}, {"start", two}})),
+      "start is 2 and count 0, but input of shape [1, 2, 5] has 2 tokens");
   EXPECT_EQ(refusal_of(with("slice", {{1, 2, 5, 5}}, {{"axis", std::string("tokens")}})),
             "input has shape [1, 2, 5, 5], expected rank 3");
   EXPECT_EQ(refusal_of(with("tokens_to_image", {{1, 11, 4}, {1, 8, 3, 4}})),
@@ -100,6 +100,18 @@ TEST(Arrangements, SayWhatDoesNotMeet) {
   OpCase scaled = with("scale", {{1, 4, 2, 2}});
   scaled.weights["weight"] = Tensor(Shape{2, 2});
   EXPECT_EQ(refusal_of(scaled), "weight has shape [2, 2], expected [4]");
+}
+
+TEST(SidesAndNorms, SayWhatDoesNotMeet) {
+  EXPECT_EQ(refusal_of(with("group_norm", {{1, 8, 2, 2}}, {{"groups", std::int64_t{3}}})),
+            "groups is 3, which does not divide 8 channels");
+  EXPECT_EQ(refusal_of(with("pad", {{1, 2, 3, 3}},
+                            {{"padding", Pair{0, 3, 0, 0}}, {"mode", std::string("reflect")}})),
+            "padding of 3 is too much for input of shape [1, 2, 3, 3] in the mode reflect");
+  EXPECT_EQ(refusal_of(with("adaptive_max_pool", {{1, 2, 0, 3}}, {{"output_size", Pair{1, 1}}})),
+            "input has shape [1, 2, 0, 3], which has no positions");
+  EXPECT_EQ(refusal_of(with("resize", {{1, 2, 3}}, {{"factor", Pair{2, 2}}})),
+            "input has shape [1, 2, 3], expected rank 4");
 }
 
 TEST(WindowAttention, SaysWhatDoesNotMeet) {

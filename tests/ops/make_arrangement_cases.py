@@ -186,9 +186,53 @@ def other_ranks():
     return [linear, norm, softmax]
 
 
+def sides_and_sizes():
+    pad, resize, largest = Cases("pad"), Cases("resize"), Cases("adaptive_max_pool")
+    x = rand(2, 3, 4, 5)
+    for mode in ("constant", "reflect", "replicate"):
+        for top, left, bottom, right in ((1, 2, 3, 0), (0, 4, 2, 1)):
+            value = 0.5 if mode == "constant" else 0.0
+            options = {"value": value} if mode == "constant" else {}
+            y = F.pad(x, (left, right, top, bottom), mode=mode, **options)
+            attributes = {"padding": [top, left, bottom, right], "mode": mode, "value": value}
+            pad.add(f"{mode}_{top}_{left}", [x], y, attributes)
+    for mode in ("nearest", "bilinear", "bicubic"):
+        for factor in ([2, 2], [3, 1], [1, 4]):
+            y = F.interpolate(x, scale_factor=tuple(map(float, factor)), mode=mode,
+                              align_corners=None if mode == "nearest" else False)
+            attributes = {"factor": factor, "interpolation": mode}
+            resize.add(f"{mode}_{factor[0]}_{factor[1]}", [x], y, attributes)
+    x = rand(2, 70, 7, 9)
+    for size in (1, [3, 2], [7, 9], [9, 4]):
+        y = F.adaptive_max_pool2d(x, size)
+        largest.add(f"to_{size}".replace(" ", ""), [x], y, {"output_size": size})
+    return [pad, resize, largest]
+
+
+def norms():
+    groups, local = Cases("group_norm"), Cases("local_response_norm")
+    l2 = Cases("l2_normalize")
+    x = rand(2, 12, 5, 4) + 3
+    for count in (1, 3, 12):
+        weight, bias = (rand(12), rand(12)) if count != 3 else (None, None)
+        y = F.group_norm(x, count, weight, bias, 1e-5)
+        groups.add(f"of_{count}", [x], y, {"groups": count}, {"weight": weight, "bias": bias})
+    x = rand(2, 7, 3, 4, scale=2)
+    for size, alpha, beta, k in ((5, 1e-4, 0.75, 2.0), (2, 0.5, 0.75, 1.0), (3, 1.0, 0.5, 0.1)):
+        y = F.local_response_norm(x, size, alpha, beta, k)
+        attributes = {"size": size, "alpha": alpha, "beta": beta, "k": k}
+        local.add(f"of_{size}", [x], y, attributes)
+    for name, x in (("image", rand(2, 7, 3, 4)), ("tokens", rand(2, 5, 9)), ("features", rand(3, 6))):
+        y = F.normalize(x, dim=1 if x.dim() == 4 else -1)
+        l2.add(name, [x], y, {"eps": 1e-12})
+    x = rand(2, 6, scale=1e-3)
+    l2.add("small", [x], F.normalize(x, dim=-1, eps=0.5), {"eps": 0.5})
+    return [groups, local, l2]
+
+
 def main():
     groups = [*scale(), *slices(), *shapes(), *window_attention(), *grid_attention(),
-              *biased_attention(), *other_ranks()]
+              *biased_attention(), *other_ranks(), *sides_and_sizes(), *norms()]
     total = sum(cases.write() for cases in groups)
     print(f"{len(groups)} files, {total} bytes")
 

@@ -14,7 +14,9 @@ namespace {
 
 // Operators that move values, or round the exact result of one operation once.
 bool is_exact(std::string_view op) {
-  constexpr std::array kExact{"channel_shuffle",
+  constexpr std::array kExact{"adaptive_max_pool",
+                              "pad",
+                              "channel_shuffle",
                               "class_token",
                               "concat",
                               "features_to_image",

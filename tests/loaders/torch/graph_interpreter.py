@@ -84,6 +84,14 @@ def space_to_depth(x, a, w):
     return torch.cat([x[:, :, i::h, j::w_] for i, j in cells], 1)
 
 
+def pad(x, a, w):
+    top, left, bottom, right = a["padding"]
+    mode = a.get("mode", "constant")
+    if mode != "constant":
+        return F.pad(x, (left, right, top, bottom), mode=mode)
+    return F.pad(x, (left, right, top, bottom), value=a.get("value", 0.0))
+
+
 def channel_shuffle(x, a, w):
     return x.unflatten(1, (a["groups"], -1)).transpose(1, 2).flatten(1, 2)
 
@@ -256,9 +264,10 @@ OPERATORS = {
         lambda x, a, w: F.normalize(x, dim=1 if x.dim() == 4 else -1, eps=a["eps"])
     ),
     "adaptive_max_pool": _one(lambda x, a, w: F.adaptive_max_pool2d(x, a["output_size"])),
-    "pad": _one(lambda x, a, w: _padded(x, a["padding"], a.get("value", 0.0))),
+    "pad": _one(pad),
     "resize": _one(
-        lambda x, a, w: F.interpolate(x, scale_factor=a["factor"], mode=a["interpolation"])
+        lambda x, a, w: F.interpolate(x, scale_factor=list(map(float, a["factor"])),
+                                      mode=a["interpolation"])
     ),
     "batch_norm": _one(batch_norm),
     "layer_norm": _one(layer_norm),

@@ -251,6 +251,7 @@ class Rearranged(nn.Module):
         self.first = nn.Parameter(torch.randn(1, 1, 12))
         self.mix = nn.Linear(20, 20)
         self.down, self.up = nn.Linear(12, 4), nn.Linear(4, 12)
+        self.groups, self.local = nn.GroupNorm(3, 12), nn.LocalResponseNorm(3, 0.5, 0.75, 2.0)
         self.register_buffer("mean", torch.randn(1, 12, 1, 1))
         self.register_buffer("spread", torch.rand(1, 12, 1, 1) + 0.5)
 
@@ -269,7 +270,11 @@ class Rearranged(nn.Module):
         tokens = tokens + self.mix(tokens.transpose(1, 2)).transpose(1, 2)
         y = tokens.transpose(1, 2).reshape(n, c, h, w)
         y = F.pad(y, (1, 0, 2, 1))[:, :, ::2, ::2]
-        y = F.interpolate(y, scale_factor=2, mode="nearest")
+        y = self.local(self.groups(F.interpolate(y, scale_factor=2, mode="nearest")))
+        y = F.pad(y, (1, 1, 0, 2), mode="reflect")
+        y = y + F.interpolate(
+            F.adaptive_max_pool2d(y, (5, 4)), scale_factor=2, mode="bilinear", align_corners=False
+        )
         return -y, tokens.permute(0, 2, 1), F.normalize(tokens, dim=-1).mean(1)
 
 

@@ -76,6 +76,16 @@ RIGHT = {
     "mean": layer("mean", attributes={"keep": True}),
     "softmax": layer("softmax", attributes={}, weights={}),
     "identity": layer("identity"),
+    "pad": layer("pad", attributes={"padding": [1, 0, 2, 0], "value": -1, "mode": "constant"}),
+    "resize": layer("resize", attributes={"factor": [2, 2], "interpolation": "bilinear"}),
+    "l2_normalize": layer("l2_normalize", attributes={"eps": 1e-12}),
+    "group_norm": layer(
+        "group_norm", attributes={"groups": 2, "eps": 1e-5}, weights={"weight": "w", "bias": "b"}
+    ),
+    "local_response_norm": layer(
+        "local_response_norm", attributes={"size": 5, "alpha": 1e-4, "beta": 0.75, "k": 2}
+    ),
+    "adaptive_max_pool": layer("adaptive_max_pool", attributes={"output_size": 1}),
     "scale": layer(
         "scale", attributes={"factor": 2, "offset": -0.5}, weights={"weight": "w", "bias": "b"}
     ),
