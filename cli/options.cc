@@ -19,6 +19,17 @@ std::int64_t parse_side(std::string_view text, const std::string& whole) {
 
 }  // namespace
 
+std::pair<std::int64_t, std::int64_t> parse_size(const std::string& size) {
+  if (size.empty()) return {0, 0};
+  const std::size_t cross = size.find('x');
+  if (cross == std::string::npos) {
+    const std::int64_t side = parse_side(size, size);
+    return {side, side};
+  }
+  const std::string_view view(size);
+  return {parse_side(view.substr(0, cross), size), parse_side(view.substr(cross + 1), size)};
+}
+
 void ModelOptions::add_to(CLI::App& command, bool with_size) {
   command.add_option("BUNDLE", bundle, "Folder or .safetensors file of a model")->required();
   if (with_size) {
@@ -29,17 +40,6 @@ void ModelOptions::add_to(CLI::App& command, bool with_size) {
   command.add_option("--threads", threads, "Threads (default: the CPUs this process may use)")
       ->type_name("N");
   command.add_flag("--oracle", oracle, "Run the plain reference kernels, unfused (slow, exact)");
-}
-
-std::pair<std::int64_t, std::int64_t> ModelOptions::parsed_size() const {
-  if (size.empty()) return {0, 0};
-  const std::size_t cross = size.find('x');
-  if (cross == std::string::npos) {
-    const std::int64_t side = parse_side(size, size);
-    return {side, side};
-  }
-  const std::string_view view(size);
-  return {parse_side(view.substr(0, cross), size), parse_side(view.substr(cross + 1), size)};
 }
 
 PlanOptions ModelOptions::plan_options(const Bundle& model) const {

@@ -10,6 +10,9 @@
 
 namespace leadsman::cli {
 
+/// {height, width} of "HxW" or "S"; {0, 0} of "". Throws Error(kUsage).
+std::pair<std::int64_t, std::int64_t> parse_size(const std::string& size);
+
 struct ModelOptions {
   std::string bundle;
   std::string size;  ///< "HxW", "S" or empty
@@ -17,8 +20,7 @@ struct ModelOptions {
   bool oracle = false;
 
   void add_to(CLI::App& command, bool with_size = true);
-  /// {height, width}; {0, 0} when --size was not given. Throws Error(kUsage).
-  std::pair<std::int64_t, std::int64_t> parsed_size() const;
+  std::pair<std::int64_t, std::int64_t> parsed_size() const { return parse_size(size); }
   PlanOptions plan_options(const Bundle& model) const;
 };
 

@@ -1,7 +1,6 @@
 // Loads a bundle; GRAPH_FORMAT.md describes its files.
 #include "leadsman/bundle.h"
 
-#include <cmath>
 #include <new>
 #include <optional>
 #include <utility>
@@ -66,11 +65,8 @@ WeightMap load_weights(const TensorFile& file, const std::map<std::string, Use, 
   const loaders::NonFinite found = loaders::find_non_finite(tensors, threads);
   if (found.index < 0) return weights;
   const auto use = std::next(uses.begin(), static_cast<std::ptrdiff_t>(found.tensor));
-  const Tensor& tensor = *tensors[found.tensor];
-  const float value = tensor.data()[found.index];
   fail_weight(file, use->first, use->second,
-              "the element at " + loaders::index_text(tensor.shape(), found.index) + " is " +
-                  (std::isnan(value) ? "NaN" : "infinite"));
+              loaders::non_finite_text(*tensors[found.tensor], found.index));
 }
 
 std::map<std::string, Use, std::less<>> weight_uses(const Graph& graph) {
@@ -93,10 +89,7 @@ Bundle load_folder(const std::string& path, const LoadOptions& options) {
   bundle.preprocess = std::move(document.preprocess);
   const auto uses = weight_uses(bundle.graph);
   if (!uses.empty()) bundle.weights = load_weights(TensorFile::open(files.weights), uses, options);
-  if (loaders::path_exists(files.labels)) {
-    bundle.labels =
-        parse_labels(loaders::read_text_file(files.labels, loaders::kMaxLabelsBytes), files.labels);
-  }
+  if (loaders::path_exists(files.labels)) bundle.labels = load_labels(files.labels);
   if (loaders::path_exists(files.reference)) bundle.reference_path = files.reference;
   return bundle;
 }

@@ -2,6 +2,7 @@
 
 #include <algorithm>
 #include <bit>
+#include <cmath>
 
 #include "core/threads.h"
 
@@ -63,6 +64,11 @@ std::string index_text(const Shape& shape, std::int64_t index) {
     index /= shape[axis];
   }
   return "[" + text + "]";
+}
+
+std::string non_finite_text(const Tensor& tensor, std::int64_t index) {
+  const char* const what = std::isnan(tensor.data()[index]) ? "NaN" : "infinite";
+  return "the element at " + index_text(tensor.shape(), index) + " is " + what;
 }
 
 }  // namespace leadsman::loaders

@@ -22,5 +22,7 @@ NonFinite find_non_finite(const std::vector<const Tensor*>& tensors, int threads
 
 /// "[3, 0, 1, 2]": the place of a value by its index in logical order.
 std::string index_text(const Shape& shape, std::int64_t index);
+/// "the element at [3, 0, 1, 2] is NaN". Requires a value there that is not finite.
+std::string non_finite_text(const Tensor& tensor, std::int64_t index);
 
 }  // namespace leadsman::loaders

@@ -6,6 +6,7 @@
 #include "leadsman/bundle.h"
 #include "leadsman/error.h"
 #include "loaders/bundle_files.h"
+#include "loaders/mapped_file.h"
 #include "loaders/text.h"
 
 namespace leadsman {
@@ -58,6 +59,10 @@ std::vector<std::string> parse_labels(std::string_view text, const std::string& 
     labels.emplace_back(label);
   }
   return labels;
+}
+
+std::vector<std::string> load_labels(const std::string& path) {
+  return parse_labels(loaders::read_text_file(path, loaders::kMaxLabelsBytes), path);
 }
 
 }  // namespace leadsman

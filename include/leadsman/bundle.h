@@ -59,5 +59,6 @@ std::string graph_text(const Graph& graph, const std::optional<Preprocess>& prep
 /// Class names, one a line: UTF-8 without control characters, at most 1024 bytes each; line ends of
 /// Windows and blank lines at the end are tolerated. Throws Error(kInput) naming the line.
 std::vector<std::string> parse_labels(std::string_view text, const std::string& file_name);
+std::vector<std::string> load_labels(const std::string& path);
 
 }  // namespace leadsman
