@@ -34,7 +34,7 @@ EXCEPTIONS = {("observe", "picture")}
 HEADERS = {
     "core": ["attributes", "error", "names", "shape", "tensor", "version"],
     "engine": ["graph", "hooks", "plan", "profile", "runner"],
-    "loaders": ["bundle", "picture", "preprocess", "tensor_file"],
+    "loaders": ["architectures", "bundle", "picture", "preprocess", "tensor_file"],
     "observe": ["capture", "compare", "maps"],
 }
 ROOM_OF_HEADER = {name: room for room, names in HEADERS.items() for name in names}
