@@ -15,5 +15,6 @@ Command add_classify(CLI::App& app);
 Command add_tap(CLI::App& app);
 Command add_verify(CLI::App& app);
 Command add_time(CLI::App& app);
+Command add_import(CLI::App& app);
 
 }  // namespace leadsman::cli

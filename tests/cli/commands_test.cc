@@ -197,7 +197,7 @@ TEST(Tap, DrawsSheetsAndHeads) {
 }
 
 TEST(Tool, HelpOfEveryCommandShowsAnExample) {
-  for (const std::string command : {"describe", "classify", "tap", "verify", "time"}) {
+  for (const std::string command : {"describe", "classify", "tap", "verify", "time", "import"}) {
     const ToolResult result = run_tool({command, "--help"});
     EXPECT_EQ(result.exit_code, 0);
     EXPECT_NE(result.out.find("Example: leadsman " + command), std::string::npos);
