@@ -7,6 +7,7 @@
 //     et al. 2017 have it), resnext* (Xie et al. 2017), wide_resnet* (Zagoruyko & Komodakis 2016)
 //   - mobilenet_v2 (Sandler et al. 2018)
 //   - efficientnet_b0 (Tan & Le 2019)
+//   - convnext_tiny, small, base, large (Liu et al. 2022)
 //   - vit_b_* and vit_l_* (Dosovitskiy et al. 2021), vit_ti_* and vit_s_* (Touvron et al. 2021;
 //     not in torchvision, whose names of layers and tensors they use)
 //

@@ -20,8 +20,9 @@ constexpr double kStd[] = {0.229, 0.224, 0.225};
 
 std::vector<const Published*> all_published() {
   std::vector<const Published*> all;
-  for (const auto family : {loaders::resnet_family(), loaders::mobilenet_family(),
-                            loaders::efficientnet_family(), loaders::vit_family()}) {
+  for (const auto family :
+       {loaders::resnet_family(), loaders::mobilenet_family(), loaders::efficientnet_family(),
+        loaders::convnext_family(), loaders::vit_family()}) {
     for (const Published& each : family) all.push_back(&each);
   }
   return all;

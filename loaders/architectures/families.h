@@ -21,6 +21,7 @@ struct Published {
 
 std::span<const Published> resnet_family();
 std::span<const Published> mobilenet_family();
+std::span<const Published> convnext_family();
 std::span<const Published> efficientnet_family();
 std::span<const Published> vit_family();
 

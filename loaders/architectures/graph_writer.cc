@@ -82,11 +82,12 @@ std::string GraphWriter::batch_norm(const std::string& name, const std::string& 
   return name;
 }
 
-std::string GraphWriter::layer_norm(const std::string& name, const std::string& input, double eps) {
+std::string GraphWriter::layer_norm(const std::string& name, const std::string& input, double eps,
+                                    const std::string& tensors) {
   const Flow in = flows_.at(input);
   layer(name, "layer_norm", {input}, {{"eps", eps}});
-  weight("weight", name + ".weight", {{in.channels}, 1.0, kSpread});
-  weight("bias", name + ".bias", {{in.channels}, 0.0, kSpread});
+  weight("weight", tensors + ".weight", {{in.channels}, 1.0, kSpread});
+  weight("bias", tensors + ".bias", {{in.channels}, 0.0, kSpread});
   flows_[name] = {in.channels, 1.0 + 2.0 * kSpread * kSpread, 0.0};
   return name;
 }
@@ -119,6 +120,14 @@ std::string GraphWriter::mul(const std::string& name, const std::string& image,
                              const std::string& factors) {
   layer(name, "mul", {image, factors});
   flows_[name].power *= flows_.at(factors).power;
+  return name;
+}
+
+std::string GraphWriter::scale(const std::string& name, const std::string& input,
+                               const std::string& tensor, const ArchitectureWeight& factors) {
+  layer(name, "scale", {input});
+  weight("weight", tensor, factors);
+  flows_[name].power *= factors.mean * factors.mean + factors.spread * factors.spread;
   return name;
 }
 

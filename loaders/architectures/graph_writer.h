@@ -45,13 +45,18 @@ class GraphWriter {
                      const std::string& joint = ".");
   /// `gain`: the mean of the seeded gains.
   std::string batch_norm(const std::string& name, const std::string& input, double gain = 1.0);
-  std::string layer_norm(const std::string& name, const std::string& input, double eps);
+  /// `tensors` stands in the names of its weights for the layer's name.
+  std::string layer_norm(const std::string& name, const std::string& input, double eps,
+                         const std::string& tensors);
   /// `kind`: relu, relu6, silu, gelu or sigmoid.
   std::string activation(const std::string& name, const std::string& input,
                          const std::string& kind);
   std::string add(const std::string& name, const std::string& first, const std::string& second);
   /// An image times a factor a channel.
   std::string mul(const std::string& name, const std::string& image, const std::string& factors);
+  /// A learned factor a channel, the weight `tensor`.
+  std::string scale(const std::string& name, const std::string& input, const std::string& tensor,
+                    const ArchitectureWeight& factors);
   /// Adaptive pooling to 1x1.
   std::string global_pool(const std::string& name, const std::string& input);
   /// Any other layer; channels and power are those of the first input.

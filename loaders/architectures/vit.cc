@@ -21,6 +21,10 @@ constexpr ViT kLarge{1024, 16, 24};
 constexpr double kEps = 1e-6;
 constexpr double kPositionSpread = 0.5;
 
+std::string layer_norm(GraphWriter& w, const std::string& name, const std::string& input) {
+  return w.layer_norm(name, input, kEps, name);
+}
+
 /// Patches, class token and positions.
 std::string embed(GraphWriter& w, std::int64_t width, std::int64_t patch) {
   const std::string grid =
@@ -40,13 +44,13 @@ std::string embed(GraphWriter& w, std::int64_t width, std::int64_t patch) {
 std::string block(GraphWriter& w, const std::string& path, const std::string& input,
                   const ViT& net) {
   const std::string attention = path + "self_attention.";
-  std::string x = w.layer_norm(path + "ln_1", input, kEps);
+  std::string x = layer_norm(w, path + "ln_1", input);
   x = w.linear(attention + "in_proj", x, 3 * net.width, "_");
   x = w.layer(attention + "attention", "attention", {x}, {{"heads", net.heads}});
   w.set_channels(x, net.width);
   x = w.linear(attention + "out_proj", x, net.width);
   const std::string middle = w.add(path + "add", w.layer(path + "dropout", "identity", {x}), input);
-  x = w.linear(path + "mlp.0", w.layer_norm(path + "ln_2", middle, kEps), 4 * net.width);
+  x = w.linear(path + "mlp.0", layer_norm(w, path + "ln_2", middle), 4 * net.width);
   x = w.layer(path + "mlp.2", "identity", {w.activation(path + "mlp.1", x, "gelu")});
   x = w.layer(path + "mlp.4", "identity", {w.linear(path + "mlp.3", x, net.width)});
   return w.add(path + "add_1", middle, x);
@@ -57,7 +61,7 @@ std::string write(GraphWriter& w, const ViT& net, std::int64_t patch) {
   for (int i = 0; i < net.depth; ++i) {
     x = block(w, "encoder.layers.encoder_layer_" + std::to_string(i) + ".", x, net);
   }
-  x = w.layer_norm("encoder.ln", x, kEps);
+  x = layer_norm(w, "encoder.ln", x);
   x = w.layer("select", "select", {x}, {{"index", std::int64_t{0}}});
   return w.linear("heads.head", x, w.options().classes);
 }

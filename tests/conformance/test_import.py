@@ -29,17 +29,18 @@ if HAS_TORCHVISION:
 
 # Small members of every family: everything is compared.
 WHOLE = [
-    "resnet18", "resnext50_32x4d", "mobilenet_v2", "efficientnet_b0", "vit_b_32", "vit_ti_16",
-    "vit_s_32",
+    "resnet18", "resnext50_32x4d", "mobilenet_v2", "efficientnet_b0", "convnext_tiny", "vit_b_32",
+    "vit_ti_16", "vit_s_32",
 ]  # fmt: skip
 # The others: graphs alone, which spares writing gigabytes of weights twice.
 GRAPHS = [
     "resnet34", "resnet50", "resnet101", "resnet152", "resnext101_32x8d", "resnext101_64x4d",
-    "wide_resnet50_2", "wide_resnet101_2", "vit_ti_32", "vit_s_16", "vit_b_16", "vit_l_32",
+    "wide_resnet50_2", "convnext_small", "convnext_base", "vit_ti_32", "vit_s_16", "vit_b_16",
+    "vit_l_32",
 ]  # fmt: skip
 
-# 304 million weights for what vit_l_32 and the other patches of 16 have shown.
-LEFT_OUT = ["vit_l_16"]
+# Hundreds of millions of weights for what their smaller relatives have shown.
+LEFT_OUT = ["wide_resnet101_2", "convnext_large", "vit_l_16"]
 
 SIZE = 64  # a multiple of every patch
 
@@ -52,6 +53,7 @@ DEFAULTS = {
     "max_pool": {"padding": [0] * 4, "dilation": [1, 1], "ceil_mode": False},
     "position_embed": {"prefix_tokens": 1},
     "attention": {"scale": 0.0},
+    "scale": {"factor": 1.0, "offset": 0.0},
 }
 # Touvron et al. 2021, table 1: width and heads of DeiT-Ti and DeiT-S, 12 layers each.
 DEIT = {"ti": (192, 3), "s": (384, 6)}

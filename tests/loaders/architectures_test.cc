@@ -32,6 +32,8 @@ constexpr PublishedFigures kTorchvision[] = {
     {"resnext101_32x8d", 88791336, 16.414}, {"resnext101_64x4d", 83455272, 15.46},
     {"wide_resnet50_2", 68883240, 11.398},  {"wide_resnet101_2", 126886696, 22.753},
     {"mobilenet_v2", 3504872, 0.301},       {"efficientnet_b0", 5288548, 0.386},
+    {"convnext_tiny", 28589128, 4.456},     {"convnext_small", 50223688, 8.684},
+    {"convnext_base", 88591464, 15.355},    {"convnext_large", 197767336, 34.361},
     {"vit_b_16", 86567656, 17.564},         {"vit_b_32", 88224232, 4.409},
     {"vit_l_16", 304326632, 61.555},        {"vit_l_32", 306535400, 15.378},
 };
@@ -198,7 +200,7 @@ Tensor smooth_picture(std::int64_t side, std::uint64_t seed) {
 
 TEST(SeededWeights, KeepActivationsFromVanishingAndExploding) {
   for (const std::string name :
-       {"resnet18", "resnet50", "mobilenet_v2", "efficientnet_b0", "vit_ti_16"}) {
+       {"resnet18", "resnet50", "mobilenet_v2", "efficientnet_b0", "convnext_tiny", "vit_ti_16"}) {
     for (const std::uint64_t seed : {1U, 2U}) {
       const Architecture built = build_architecture(name, {.classes = 50, .size = {96, 96}});
       PlanOptions options;
