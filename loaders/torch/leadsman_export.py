@@ -2667,6 +2667,22 @@ def vary_constant_parameters(module, seed=0):
             parameter.copy_(value + spread * noise)
 
 
+def quieten_residual_branches(module):
+    """Sets the last gain of the residual branches of torchvision's blocks to 0, as they are trained
+    (Goyal et al. 2017): with gains of 1 all the way, deep networks of random weights are chaotic,
+    and blow roundings up by factors of thousands.
+    """
+    always = ("BasicBlock", "Bottleneck", "ResBottleneckBlock")
+    for block in module.modules():
+        residual = getattr(block, "use_res_connect", getattr(block, "apply_residual", None))
+        if not (type(block).__name__ in always if residual is None else residual):
+            continue
+        shortcut = getattr(block, "downsample", None) or getattr(block, "proj", None)
+        skipped = set(shortcut.modules()) if shortcut is not None else set()
+        norms = [m for m in block.modules() if isinstance(m, nn.BatchNorm2d) and m not in skipped]
+        nn.init.zeros_(norms[-1].weight)
+
+
 def settle_batch_norm(module, inputs):
     """Sets the running statistics of every batch normalisation to those of `inputs`.
 
@@ -2747,8 +2763,6 @@ def torchvision_model(name, size=None, classes=1000, seed=0):
         options.update(transform_input=True, init_weights=True)
     if name == "googlenet":
         options["aux_logits"] = False
-    if re.match("(wide_)?res(net|next)", name):  # as they are trained (Goyal et al. 2017)
-        options["zero_init_residual"] = True
     torch.manual_seed(seed)
     module = torchvision.models.get_model_builder(name)(weights=None, **options)
     return module, _torchvision_preprocess(torchvision, name, size)
@@ -2762,6 +2776,7 @@ def _only_square(name, size):
 
 def settle(module, size, seed=0):
     """Gives a seeded module values that training might have given: see the functions called."""
+    quieten_residual_branches(module)
     vary_constant_parameters(module, seed)
     settle_batch_norm(module, picture_like(8, *size, seed=seed + 2))
 
