@@ -43,8 +43,8 @@ double steps_seconds(const Profile& profile) {
 
 // Everything but steps and input: differences of sums of best times may be slightly negative.
 double rest_seconds(const Profile& profile) {
-  return std::max(
-      0.0, profile.whole.best_seconds - steps_seconds(profile) - profile.input.best_seconds);
+  return std::max(0.0,
+                  profile.whole.best_seconds - steps_seconds(profile) - profile.input.best_seconds);
 }
 
 double gflops(double seconds, std::int64_t macs) {
@@ -107,7 +107,8 @@ void print_profile(std::ostream& out, const Plan& plan, const Profile& profile, 
   add(kernels, {"whole run", ""}, whole, plan.macs());
   kernels.print(out);
   out << "\nbest of " << counted(profile.whole.runs, "run") << ", "
-      << counted(plan.threads(), "thread") << ", " << instruction_set() << ", peak " << fixed(peak * 1e-9, 1) << " GFLOP/s\n";
+      << counted(plan.threads(), "thread") << ", " << instruction_set() << ", peak "
+      << fixed(peak * 1e-9, 1) << " GFLOP/s\n";
 }
 
 Json profile_json(const Plan& plan, const Profile& profile, double peak) {

@@ -129,10 +129,9 @@ class Timer {
     table.print(std::cout);
     const auto sizes = inputs_[0].shape().sizes();
     std::cout << '\n'
-              << counted(options_.runs, "run") << " of "
-              << shape_text({sizes.begin(), sizes.end()}) << ", "
-              << counted(plan_->threads(), "thread") << ", " << instruction_set() << ", peak "
-              << fixed(peak_ * 1e-9, 1) << " GFLOP/s\n";
+              << counted(options_.runs, "run") << " of " << shape_text({sizes.begin(), sizes.end()})
+              << ", " << counted(plan_->threads(), "thread") << ", " << instruction_set()
+              << ", peak " << fixed(peak_ * 1e-9, 1) << " GFLOP/s\n";
   }
 
   void print_profiled() {

@@ -1,4 +1,5 @@
-// Largest values that bring an image of any size to a given one; [1, 1] is the largest of the image.
+// Largest values that bring an image of any size to a given one; [1, 1] is the largest of the
+// image.
 #pragma once
 
 #include "ops/operator.h"

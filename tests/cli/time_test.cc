@@ -42,17 +42,16 @@ void expect_profile(const json& profile) {
 }
 
 TEST(Time, GivesBestAndMedian) {
-  const ToolResult result =
-      run_tool({"time", kConv, "--runs", "5", "--batch", "2", "--size", "48x80", "--threads=2",
-                "--json"});
+  const ToolResult result = run_tool(
+      {"time", kConv, "--runs", "5", "--batch", "2", "--size", "48x80", "--threads=2", "--json"});
   ASSERT_EQ(result.exit_code, 0) << result.err;
   const json document = json::parse(result.out);
   EXPECT_EQ(document.at("inputs").at("image"), json({2, 3, 48, 80}));
   EXPECT_EQ(document.at("threads"), 2);
   EXPECT_GT(document.at("best_seconds").get<double>(), 0.0);
   EXPECT_GE(document.at("median_seconds").get<double>(), document.at("best_seconds"));
-  const double gflops = 2e-9 * document.at("macs").get<double>() /
-                        document.at("median_seconds").get<double>();
+  const double gflops =
+      2e-9 * document.at("macs").get<double>() / document.at("median_seconds").get<double>();
   EXPECT_NEAR(document.at("gflops"), gflops, 1e-6 * gflops);
 }
 
@@ -91,8 +90,7 @@ TEST(Time, ProfilesSteps) {
   const ToolResult result = run_tool({"time", kConv, "--profile", "--runs", "3", "--json"});
   ASSERT_EQ(result.exit_code, 0) << result.err;
   expect_profile(json::parse(result.out));
-  const ToolResult table =
-      run_tool({"time", kConv, "--profile", "--runs", "3"}, "", "COLUMNS=80");
+  const ToolResult table = run_tool({"time", kConv, "--profile", "--runs", "3"}, "", "COLUMNS=80");
   ASSERT_EQ(table.exit_code, 0) << table.err;
   EXPECT_NE(table.out.find("conv1 +2"), std::string::npos);
   EXPECT_NE(table.out.find("whole run"), std::string::npos);
