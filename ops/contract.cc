@@ -26,12 +26,11 @@ void check_range(const AttributeSpec& spec, double value) {
   }
 }
 
-// One integer, a pair or (for paddings) four, spread to the full count.
+// One integer, a pair or (for paddings) four, spread to the full count. A list of one is neither.
 Integers spread(const AttributeSpec& spec, const AttributeValue& value, std::size_t count) {
+  if (const auto* one = std::get_if<std::int64_t>(&value)) return Integers(count, *one);
   Integers given;
-  if (const auto* one = std::get_if<std::int64_t>(&value)) given = {*one};
   if (const auto* list = std::get_if<Integers>(&value)) given = *list;
-  if (given.size() == 1) return Integers(count, given[0]);
   if (given.size() == 2 && count == 4) return {given[0], given[1], given[0], given[1]};
   if (given.size() == count) return given;
   throw_input(std::string(spec.name) + ": is not " +
