@@ -1,5 +1,6 @@
 #include "ops/group_norm/group_norm.h"
 
+#include <array>
 #include <cmath>
 
 #include "core/threads.h"
@@ -113,7 +114,9 @@ class GroupNorm final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    return only_reference<ReferenceKernel>();
+    static const StrategyOf<ReferenceKernel> reference("reference");
+    static const std::array<const Strategy*, 2> all{&group_norm_rows(), &reference};
+    return all;
   }
 };
 

@@ -9,4 +9,6 @@ namespace leadsman::ops {
 
 const Operator& group_norm_operator();
 
+const Strategy& group_norm_rows();  ///< "rows": channels side by side, values in float
+
 }  // namespace leadsman::ops
