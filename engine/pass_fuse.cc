@@ -3,6 +3,7 @@
 #include <optional>
 
 #include "engine/plan_state.h"
+#include "ops/activation/activation.h"
 
 namespace leadsman::internal {
 namespace {
@@ -116,8 +117,7 @@ class Fuser {
         step.epilogue.activation.kind != ops::ActivationKind::kNone) {
       return false;
     }
-    step.epilogue.activation = {ops::activation_kind(reader.context.attributes.text("kind")),
-                                static_cast<float>(reader.context.attributes.number("slope"))};
+    step.epilogue.activation = ops::activation_of(reader.context.attributes);
     return true;
   }
 

@@ -12,7 +12,7 @@
 namespace leadsman::ops {
 namespace {
 
-constexpr std::array<std::pair<std::string_view, ActivationKind>, 10> kNames{{
+constexpr std::array<std::pair<std::string_view, ActivationKind>, 14> kNames{{
     {"relu", ActivationKind::kRelu},
     {"relu6", ActivationKind::kRelu6},
     {"leaky_relu", ActivationKind::kLeakyRelu},
@@ -23,6 +23,10 @@ constexpr std::array<std::pair<std::string_view, ActivationKind>, 10> kNames{{
     {"hard_sigmoid", ActivationKind::kHardSigmoid},
     {"hard_swish", ActivationKind::kHardSwish},
     {"tanh", ActivationKind::kTanh},
+    {"elu", ActivationKind::kElu},
+    {"softplus", ActivationKind::kSoftplus},
+    {"mish", ActivationKind::kMish},
+    {"quick_gelu", ActivationKind::kQuickGelu},
 }};
 
 double relu6(double x) {
@@ -30,6 +34,9 @@ double relu6(double x) {
 }
 double sigmoid(double x) {
   return 1.0 / (1.0 + std::exp(-x));
+}
+double softplus(double x) {
+  return std::max(x, 0.0) + std::log1p(std::exp(-std::abs(x)));
 }
 
 }  // namespace
@@ -61,6 +68,14 @@ double activate(Activation activation, double x) {
       return x * relu6(x + 3.0) / 6.0;
     case ActivationKind::kTanh:
       return std::tanh(x);
+    case ActivationKind::kElu:
+      return x >= 0.0 ? x : static_cast<double>(activation.parameter) * std::expm1(x);
+    case ActivationKind::kSoftplus:
+      return softplus(x);
+    case ActivationKind::kMish:
+      return x * std::tanh(softplus(x));
+    case ActivationKind::kQuickGelu:
+      return x * sigmoid(1.702 * x);
   }
   return x;
 }

@@ -22,6 +22,10 @@ enum class ActivationKind {
   kHardSigmoid,  ///< relu6(x + 3) / 6 (Howard et al. 2019)
   kHardSwish,    ///< x * relu6(x + 3) / 6 (Howard et al. 2019)
   kTanh,
+  kElu,        ///< x, below zero a (e^x - 1) with a in `parameter` (Clevert et al. 2016)
+  kSoftplus,   ///< log(1 + e^x) (Dugas et al. 2001)
+  kMish,       ///< x * tanh(softplus(x)) (Misra 2020)
+  kQuickGelu,  ///< x * sigmoid(1.702 x), the sigmoid approximation of Hendrycks & Gimpel 2016
 };
 
 struct Activation {

@@ -1381,6 +1381,31 @@ def _leaky_relu_module(site, m, input):
     return _leaky_relu(site, input, m.negative_slope)
 
 
+@handles(F.elu, F.elu_)
+def _elu(site, input, alpha=1.0, inplace=False):
+    return _activation(site, input, "elu", alpha=float(alpha))
+
+
+@handles(nn.ELU)
+def _elu_module(site, m, input):
+    return _elu(site, input, m.alpha)
+
+
+@handles(F.softplus)
+def _softplus(site, input, beta=1.0, threshold=20.0):
+    if beta != 1 or threshold < 20:
+        site.fail(
+            f"softplus with beta={beta:g} and threshold={threshold:g}",
+            "only log(1 + e^x) is known: beta=1, and the default threshold or a larger one",
+        )
+    return _activation(site, input, "softplus")
+
+
+@handles(nn.Softplus)
+def _softplus_module(site, m, input):
+    return _softplus(site, input, m.beta, m.threshold)
+
+
 @handles(F.gelu)
 def _gelu(site, input, approximate="none"):
     return _activation(site, input, {"none": "gelu", "tanh": "gelu_tanh"}[approximate])

@@ -5,6 +5,16 @@
 namespace leadsman::ops {
 namespace {
 
+AttributeSpec parameter_spec(std::string_view name, double fallback, std::string_view meaning) {
+  return {.name = name,
+          .type = AttributeType::kNumber,
+          .fallback = fallback,
+          .meaning = meaning,
+          .minimum = -1e30,
+          .maximum = 1e30,
+          .choices = {}};
+}
+
 class ActivationOperator final : public Operator {
  public:
   const Contract& contract() const override {
@@ -20,14 +30,10 @@ class ActivationOperator final : public Operator {
                  .fallback = {},
                  .meaning = "which function",
                  .choices = {"relu", "relu6", "leaky_relu", "gelu", "gelu_tanh", "silu", "sigmoid",
-                             "hard_sigmoid", "hard_swish", "tanh"}},
-                {.name = "slope",
-                 .type = AttributeType::kNumber,
-                 .fallback = 0.01,
-                 .meaning = "of leaky_relu, below zero",
-                 .minimum = -1e30,
-                 .maximum = 1e30,
-                 .choices = {}},
+                             "hard_sigmoid", "hard_swish", "tanh", "elu", "softplus", "mish",
+                             "quick_gelu"}},
+                parameter_spec("slope", 0.01, "of leaky_relu, below zero"),
+                parameter_spec("alpha", 1.0, "of elu, which tends to -alpha below zero"),
             },
         .weights = {},
     };
@@ -46,7 +52,9 @@ class ActivationOperator final : public Operator {
 }  // namespace
 
 Activation activation_of(const Attributes& attributes) {
-  return {activation_kind(attributes.text("kind")), static_cast<float>(attributes.number("slope"))};
+  const ActivationKind kind = activation_kind(attributes.text("kind"));
+  const char* parameter = kind == ActivationKind::kElu ? "alpha" : "slope";
+  return {kind, static_cast<float>(attributes.number(parameter))};
 }
 
 const Operator& activation_operator() {

@@ -63,6 +63,10 @@ void activate_row(const Activation& activation, const float* in, float* out, std
     LEADSMAN_CASE(kHardSigmoid);
     LEADSMAN_CASE(kHardSwish);
     LEADSMAN_CASE(kTanh);
+    LEADSMAN_CASE(kElu);
+    LEADSMAN_CASE(kSoftplus);
+    LEADSMAN_CASE(kMish);
+    LEADSMAN_CASE(kQuickGelu);
 #undef LEADSMAN_CASE
   }
 }

@@ -7,7 +7,9 @@
 //   relu, relu6     0     0      silu           2     2      hard_swish     2     2
 //   leaky_relu    0.5   0.5      sigmoid        2     2      tanh         1.5   1.5
 //   gelu            6    12      hard_sigmoid   1     1      e^x            1     1
+//   elu             1     1      softplus       3     3      mish         4.5   4.5
 //   gelu_tanh      20    24      (x^3 rounds before the exponential: the tail below -2)
+//   quick_gelu     13    13      (so does 1.702 x)
 //
 // NaN stays NaN; infinities give what the plain form in epilogue.h gives.
 #pragma once

@@ -44,7 +44,7 @@ HWY_INLINE V at_most(D, V v, V high) {
 // in the last place is 1, so that the sum's bits hold it.
 template <class D>
 struct ReducedExponential {
-  hn::Vec<D> fraction;                   // e^r
+  hn::Vec<D> beyond_one;                 // e^r - 1
   hn::Vec<hn::RebindToSigned<D>> whole;  // n
 };
 
@@ -62,8 +62,7 @@ HWY_INLINE ReducedExponential<D> reduce_exponential(D d, V x) {
   p = hn::MulAdd(p, r, hn::Set(d, 4.1665795894e-2F));
   p = hn::MulAdd(p, r, hn::Set(d, 1.6666665459e-1F));
   p = hn::MulAdd(p, r, hn::Set(d, 5.0000001201e-1F));
-  return {hn::Add(hn::MulAdd(p, hn::Mul(r, r), r), hn::Set(d, 1.0F)),
-          hn::Sub(hn::BitCast(di, sum), hn::BitCast(di, magic))};
+  return {hn::MulAdd(p, hn::Mul(r, r), r), hn::Sub(hn::BitCast(di, sum), hn::BitCast(di, magic))};
 }
 
 // 2^n for -127 < n < 128.
@@ -78,10 +77,10 @@ template <class D, class V = hn::Vec<D>>
 HWY_INLINE V exponential(D d, V x) {
   x = at_most(d, at_least(d, x, hn::Set(d, -104.0F)), hn::Set(d, 89.0F));
   const auto e = reduce_exponential(d, x);
+  const V fraction = hn::Add(e.beyond_one, hn::Set(d, 1.0F));
   // 2^n in two factors, as n may be below the smallest exponent.
   const auto half = hn::ShiftRight<1>(e.whole);
-  return hn::Mul(hn::Mul(e.fraction, power_of_two(d, half)),
-                 power_of_two(d, hn::Sub(e.whole, half)));
+  return hn::Mul(hn::Mul(fraction, power_of_two(d, half)), power_of_two(d, hn::Sub(e.whole, half)));
 }
 
 // For x <= 0, with 0 below e^-86: what a softmax needs. Subnormals are slow on many processors.
@@ -89,8 +88,45 @@ template <class D, class V = hn::Vec<D>>
 HWY_INLINE V exponential_of_negative(D d, V x) {
   const V lowest = hn::Set(d, -86.0F);
   const auto e = reduce_exponential(d, at_least(d, x, lowest));
-  const V value = hn::Mul(e.fraction, power_of_two(d, e.whole));
+  const V fraction = hn::Add(e.beyond_one, hn::Set(d, 1.0F));
+  const V value = hn::Mul(fraction, power_of_two(d, e.whole));
   return hn::IfThenZeroElse(hn::Lt(x, lowest), value);
+}
+
+// e^x - 1 = 2^n (e^r - 1) + (2^n - 1) for x <= 0, without cancellation near 0; 0 for x > 0.
+template <class D, class V = hn::Vec<D>>
+HWY_INLINE V exponential_less_one(D d, V x) {
+  const auto e = reduce_exponential(d, at_most(d, at_least(d, x, hn::Set(d, -86.0F)), hn::Zero(d)));
+  const V power = power_of_two(d, e.whole);
+  return hn::MulAdd(power, e.beyond_one, hn::Sub(power, hn::Set(d, 1.0F)));
+}
+
+// max(x, 0) + log(1 + u), u = e^-|x|; log(1 + u) = 2 artanh(s), s = u / (u + 2) <= 1/3, by the
+// series s + s^3/3 + s^5/5 + ... of artanh, cut off at 1e-9 of it.
+template <class D, class V = hn::Vec<D>>
+HWY_INLINE V softplus(D d, V x) {
+  const V two = hn::Set(d, 2.0F);
+  const V u = exponential(d, hn::Neg(hn::Abs(x)));
+  const V s = hn::Div(u, hn::Add(u, two));
+  const V z = hn::Mul(s, s);
+  V p = hn::Set(d, 1.0F / 15.0F);
+  p = hn::MulAdd(p, z, hn::Set(d, 1.0F / 13.0F));
+  p = hn::MulAdd(p, z, hn::Set(d, 1.0F / 11.0F));
+  p = hn::MulAdd(p, z, hn::Set(d, 1.0F / 9.0F));
+  p = hn::MulAdd(p, z, hn::Set(d, 1.0F / 7.0F));
+  p = hn::MulAdd(p, z, hn::Set(d, 1.0F / 5.0F));
+  p = hn::MulAdd(p, z, hn::Set(d, 1.0F / 3.0F));
+  const V logarithm = hn::Mul(two, hn::MulAdd(hn::Mul(p, z), s, s));
+  return hn::Add(at_least(d, x, hn::Zero(d)), logarithm);
+}
+
+// With e = e^x, tanh(log(1 + e)) = e (e + 2) / (e (e + 2) + 2), which is 1 from x = 20 on.
+template <class D, class V = hn::Vec<D>>
+HWY_INLINE V mish(D d, V x) {
+  const V two = hn::Set(d, 2.0F);
+  const V e = exponential(d, at_most(d, x, hn::Set(d, 20.0F)));
+  const V n = hn::Mul(e, hn::Add(e, two));
+  return hn::Mul(x, hn::Div(n, hn::Add(n, two)));
 }
 
 template <class D, class V = hn::Vec<D>>
@@ -187,6 +223,16 @@ HWY_INLINE V activate_vector(D d, V x, [[maybe_unused]] V parameter) {
     return hn::Mul(x, hard_sigmoid(d, x));
   } else if constexpr (kKind == ActivationKind::kTanh) {
     return hyperbolic_tangent(d, x);
+  } else if constexpr (kKind == ActivationKind::kElu) {
+    const V below = hn::Mul(parameter, exponential_less_one(d, x));
+    return hn::IfThenElse(hn::Ge(x, hn::Zero(d)), x, below);
+  } else if constexpr (kKind == ActivationKind::kSoftplus) {
+    return softplus(d, x);
+  } else if constexpr (kKind == ActivationKind::kMish) {
+    return mish(d, x);
+  } else if constexpr (kKind == ActivationKind::kQuickGelu) {
+    const V e = exponential(d, hn::Mul(x, hn::Set(d, -1.702F)));
+    return hn::Div(x, hn::Add(hn::Set(d, 1.0F), e));
   } else {
     return x;
   }

@@ -57,6 +57,22 @@ TEST(Runner, FusedPlansAgreeWithTheOracle) {
   }
 }
 
+TEST(Runner, FusedActivationsKeepTheirParameters) {
+  for (const auto& [kind, parameter] : {std::pair("elu", "alpha"), {"leaky_relu", "slope"}}) {
+    SCOPED_TRACE(kind);
+    GraphBuilder b;
+    b.image(3, 6, 6);
+    b.conv("conv", "image", 3, 4, 3);
+    b.layer("bent", "activation", {"conv"}, {{"kind", std::string(kind)}, {parameter, 0.3}});
+    b.output("bent");
+    const Net net{kind, b, {1, 3, 6, 6}};
+    const Tensor input = Random(14).tensor(net.input);
+    PlanOptions cut = options_for(net);
+    cut.observe = {"conv"};
+    EXPECT_LT(relative_error(run(net, options_for(net), input), run(net, cut, input)), 1e-7);
+  }
+}
+
 TEST(Runner, ResultsAreTheSameBitsForAnyNumberOfThreads) {
   for (const Net& net : nets()) {
     SCOPED_TRACE(net.name);

@@ -23,11 +23,12 @@ namespace {
 
 using ops::ActivationKind;
 
-constexpr std::array kKinds = {ActivationKind::kRelu,      ActivationKind::kRelu6,
-                               ActivationKind::kLeakyRelu, ActivationKind::kGelu,
-                               ActivationKind::kGeluTanh,  ActivationKind::kSilu,
-                               ActivationKind::kSigmoid,   ActivationKind::kHardSigmoid,
-                               ActivationKind::kHardSwish, ActivationKind::kTanh};
+constexpr std::array kKinds = {
+    ActivationKind::kRelu,    ActivationKind::kRelu6,       ActivationKind::kLeakyRelu,
+    ActivationKind::kGelu,    ActivationKind::kGeluTanh,    ActivationKind::kSilu,
+    ActivationKind::kSigmoid, ActivationKind::kHardSigmoid, ActivationKind::kHardSwish,
+    ActivationKind::kTanh,    ActivationKind::kElu,         ActivationKind::kSoftplus,
+    ActivationKind::kMish,    ActivationKind::kQuickGelu};
 
 // The exact value, in double, without the cancellation of 1 + tanh far below zero.
 double exact(ops::Activation activation, double x) {
@@ -64,6 +65,8 @@ const std::map<ActivationKind, std::array<double, 2>> kStatedErrors = {
     {ActivationKind::kGeluTanh, {20.0, 24.0}}, {ActivationKind::kSilu, {2.0, 2.0}},
     {ActivationKind::kSigmoid, {2.0, 2.0}},    {ActivationKind::kHardSigmoid, {1.0, 1.0}},
     {ActivationKind::kHardSwish, {2.0, 2.0}},  {ActivationKind::kTanh, {1.5, 1.5}},
+    {ActivationKind::kElu, {1.0, 1.0}},        {ActivationKind::kSoftplus, {3.0, 3.0}},
+    {ActivationKind::kMish, {4.5, 4.5}},       {ActivationKind::kQuickGelu, {13.0, 13.0}},
 };
 
 TEST(Activation, ErrorsAreWithinThoseStated) {
@@ -169,6 +172,20 @@ TEST(Activation, LeakyReluTakesItsSlopeFromTheAttributes) {
   }
   c.attributes.set("kind", std::string("swish"));
   EXPECT_THROW(run_op(c, "vector"), Error);
+}
+
+TEST(Activation, EluTakesItsAlphaFromTheAttributes) {
+  OpCase c{.op = "activation", .inputs = {Tensor({1, 2}, {-100.0F, 8.0F})}};
+  c.attributes.set("kind", std::string("elu"));
+  c.attributes.set("slope", 3.0);  // of leaky_relu alone
+  for (const std::string& strategy : strategy_names("activation")) {
+    EXPECT_EQ(run_op(c, strategy).data()[0], -1.0F);
+  }
+  c.attributes.set("alpha", 0.5);
+  for (const std::string& strategy : strategy_names("activation")) {
+    EXPECT_EQ(run_op(c, strategy).data()[0], -0.5F);
+    EXPECT_EQ(run_op(c, strategy).data()[1], 8.0F);
+  }
 }
 
 }  // namespace

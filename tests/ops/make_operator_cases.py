@@ -88,6 +88,10 @@ ACTIVATIONS = {
     "hard_sigmoid": lambda x, _: F.hardsigmoid(x),
     "hard_swish": lambda x, _: F.hardswish(x),
     "tanh": lambda x, _: torch.tanh(x),
+    "elu": lambda x, alpha: F.elu(x, 1.0 if alpha is None else alpha),
+    "softplus": lambda x, _: F.softplus(x),
+    "mish": lambda x, _: F.mish(x),
+    "quick_gelu": lambda x, _: x * torch.sigmoid(1.702 * x),
 }
 
 
@@ -383,6 +387,7 @@ def activation():
         cases.add(kind, [x], function(x, None), {"kind": kind})
     cases.add("leaky_relu_slope", [x], ACTIVATIONS["leaky_relu"](x, 0.25),
               {"kind": "leaky_relu", "slope": 0.25})
+    cases.add("elu_alpha", [x], ACTIVATIONS["elu"](x, 0.25), {"kind": "elu", "alpha": 0.25})
     return cases
 
 

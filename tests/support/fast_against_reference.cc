@@ -11,8 +11,9 @@ namespace leadsman::testing {
 
 void add_random_epilogue(Random& random, OpCase& c) {
   using enum ops::ActivationKind;
-  constexpr std::array kKinds = {kNone, kRelu,    kRelu6,       kLeakyRelu, kGelu, kGeluTanh,
-                                 kSilu, kSigmoid, kHardSigmoid, kHardSwish, kTanh};
+  constexpr std::array kKinds = {kNone,     kRelu, kRelu6,    kLeakyRelu,   kGelu,
+                                 kGeluTanh, kSilu, kSigmoid,  kHardSigmoid, kHardSwish,
+                                 kTanh,     kElu,  kSoftplus, kMish,        kQuickGelu};
   c.activation = {random.pick(kKinds), 0.125F};
   if (random.coin()) c.residual = random.tensor(op_output_shape(c));
 }

@@ -125,6 +125,9 @@ ACTIVATIONS = {
     "hard_swish": lambda x, a: x * ((x + 3) / 6).clamp(0, 1),
     "tanh": lambda x, a: torch.tanh(x),
     "mish": lambda x, a: x * torch.tanh(torch.log1p(torch.exp(x))),
+    "elu": lambda x, a: torch.where(x > 0, x, torch.expm1(x) * a.get("alpha", 1.0)),
+    "softplus": lambda x, a: torch.logaddexp(x, torch.zeros_like(x)),
+    "quick_gelu": lambda x, a: x / (1 + torch.exp(-1.702 * x)),
 }  # fmt: skip
 
 

@@ -85,13 +85,14 @@ class Activations(nn.Module):
     modules_ = (
         nn.ReLU(), nn.ReLU(inplace=True), nn.ReLU6(), nn.LeakyReLU(), nn.LeakyReLU(0.2), nn.GELU(),
         nn.GELU(approximate="tanh"), nn.SiLU(), nn.Sigmoid(), nn.Hardsigmoid(), nn.Hardswish(),
-        nn.Tanh(),
+        nn.Tanh(), nn.ELU(), nn.ELU(0.5), nn.Softplus(), nn.Mish(),
     )  # fmt: skip
     functions = (
         F.relu, F.relu6, F.leaky_relu, lambda x: F.leaky_relu(x, 0.3), F.gelu,
         lambda x: F.gelu(x, approximate="tanh"), F.silu, torch.sigmoid, F.hardsigmoid,
         F.hardswish, torch.tanh, torch.relu, lambda x: x.relu(), lambda x: x.sigmoid(),
-        lambda x: x.tanh(), lambda x: F.silu(x, inplace=True),
+        lambda x: x.tanh(), lambda x: F.silu(x, inplace=True), lambda x: F.elu(x, 1.5), F.softplus,
+        F.mish,
     )  # fmt: skip
 
     def __init__(self):

@@ -586,6 +586,8 @@ class ErrorTest(FolderTest):
             (nn.Sequential(nn.BatchNorm2d(4, track_running_stats=False)), None, "statistics"),
             (Call(lambda x: F.dropout(x, 0.5)), None, "drops values"),
             (Call(lambda x: 1.0 / x), None, "divides by a tensor"),
+            (nn.Sequential(nn.Softplus(beta=2)), None, "softplus with beta=2"),
+            (Call(lambda x: F.softplus(x, threshold=3)), None, "threshold=3"),
             (Call(lambda x: x.softmax(2)), None, "softmax along axis 2"),
             (Call(lambda x: x.mean(1)), None, "mean over the axes"),
             (Call(lambda x: x + x[:, :1]), None, "repeats one of its operands"),

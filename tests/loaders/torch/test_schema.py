@@ -137,6 +137,7 @@ BROKEN_LAYERS = [
     ("conv2d", ["attributes", "kernel_size"], DELETE),
     ("conv2d", ["attributes", "kernel_size"], 0),
     ("conv2d", ["attributes", "kernel_size"], [3, 3, 3]),
+    ("conv2d", ["attributes", "kernel_size"], [3]),
     ("conv2d", ["attributes", "kernel_size"], 2.5),
     ("conv2d", ["attributes", "stride"], 0),
     ("conv2d", ["attributes", "stride"], [1, -1]),
@@ -162,6 +163,7 @@ BROKEN_LAYERS = [
     ("activation", ["attributes", "kind"], DELETE),
     ("activation", ["attributes", "kind"], "swish"),
     ("activation", ["attributes", "kind"], "relu"),  # with a slope
+    ("activation", ["attributes", "alpha"], 1.0),  # of leaky_relu
     ("activation", ["weights"], {"weight": "w"}),
     ("add", ["inputs"], ["a"]),
     ("add", ["inputs"], ["a", "b", "c"]),
