@@ -100,6 +100,23 @@ TEST(Threshold, NormsOfShiftedInputsStayBelowIt) {
   EXPECT_LT(range.highest, 0.9);
 }
 
+TEST(Threshold, GroupNormsOfShiftedImagesStayBelowIt) {
+  Random random(6);
+  Range range;
+  for (int i = 0; i < 40; ++i) {
+    const std::int64_t groups = random.integer(1, 8);
+    const std::int64_t channels = groups * random.integer(1, 30);
+    Layered c{GraphBuilder(random.bits()), {}};
+    c.builder.image(channels, 7, 9);
+    c.builder.layer("norm", "group_norm", {"image"}, {{"groups", groups}});
+    const double shift = random.uniform(0.0, 50.0);
+    c.input = random.tensor({2, channels, 7, 9}, shift - 1.0, shift + 1.0);
+    range.add(ratio_of(c));
+  }
+  EXPECT_LT(range.highest, 0.7);
+  EXPECT_GT(range.highest, 1e-4);
+}
+
 TEST(Threshold, AttentionStaysBelowItForSmallAndLargeScores) {
   Random random(4);
   Range range;

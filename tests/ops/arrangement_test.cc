@@ -1,4 +1,6 @@
 // Operators that cut, scale and rearrange: identities, and what they say when shapes do not meet.
+#include <algorithm>
+
 #include <gtest/gtest.h>
 
 #include "leadsman/error.h"
@@ -112,6 +114,48 @@ TEST(SidesAndNorms, SayWhatDoesNotMeet) {
             "input has shape [1, 2, 0, 3], which has no positions");
   EXPECT_EQ(refusal_of(with("resize", {{1, 2, 3}}, {{"factor", Pair{2, 2}}})),
             "input has shape [1, 2, 3], expected rank 4");
+  EXPECT_EQ(refusal_of(with("resize", {{1, 2, 3, 3}}, {{"factor", Pair{2, 0}}})),
+            "factor: 0 is below 1");
+  EXPECT_EQ(refusal_of(with("local_response_norm", {{1, 2, 3}}, {{"size", std::int64_t{5}}})),
+            "input has shape [1, 2, 3], expected rank 4");
+  EXPECT_EQ(refusal_of(with("l2_normalize", {{3}})),
+            "input has shape [3], expected rank 2 or 3 or 4");
+  OpCase grouped = with("group_norm", {{1, 8, 2, 2}}, {{"groups", std::int64_t{2}}});
+  grouped.weights["bias"] = Tensor(Shape{2});
+  EXPECT_EQ(refusal_of(grouped), "bias has shape [2], expected [8]");
+  EXPECT_EQ(refusal_of(with("pad", {{1, 2, 3, 3}}, {{"padding", Pair{0, -1, 0, 0}}})),
+            "padding: -1 is below 0");
+}
+
+// What torch.nn.functional.normalize documents: norms below eps are divided by eps.
+TEST(L2Normalize, GivesEveryPositionTheNormOne) {
+  Random random(76);
+  const Tensor x = random.tensor({2, 9, 3, 4});
+  const Tensor y = run_op({.op = "l2_normalize", .inputs = {x}}, "reference");
+  for (std::int64_t position = 0; position < 24; ++position) {
+    double squares = 0.0;
+    for (std::int64_t c = 0; c < 9; ++c) {
+      const float value = y.data()[position / 12 * 108 + c * 12 + position % 12];
+      squares += static_cast<double>(value) * static_cast<double>(value);
+    }
+    EXPECT_NEAR(squares, 1.0, 1e-6);
+  }
+  const Tensor zero(Shape{1, 3});
+  expect_same_bits(run_op({.op = "l2_normalize", .inputs = {zero}}, "reference"), zero);
+}
+
+// Constant images stay constant: the weights of every interpolation add up to 1.
+TEST(Resize, KeepsConstantImages) {
+  for (const char* interpolation : {"nearest", "bilinear", "bicubic"}) {
+    Tensor x(Shape{1, 2, 3, 4});
+    std::fill_n(x.mutable_data(), x.elements(), 0.7F);
+    OpCase c =
+        with("resize", {}, {{"factor", Pair{3, 4}}, {"interpolation", std::string(interpolation)}});
+    c.inputs = {x};
+    const Tensor y = run_op(c, "reference");
+    EXPECT_EQ(y.shape(), (Shape{1, 2, 9, 16}));
+    for (const float value : y.values()) EXPECT_FLOAT_EQ(value, 0.7F) << interpolation;
+  }
 }
 
 TEST(WindowAttention, SaysWhatDoesNotMeet) {

@@ -62,21 +62,37 @@ void expect_rows_agree(const OpCase& c) {
   }
 }
 
+// With some values that are not finite.
+void expect_rows_give_the_same_bits(Random& random, OpCase c) {
+  float* values = c.inputs[0].mutable_data();
+  for (int k = 0; k < 20; ++k) {
+    values[random.integer(0, c.inputs[0].elements() - 1)] =
+        random.pick(std::vector<float>{kNan, kInfinity, -kInfinity});
+  }
+  const Tensor expected = run_op(c, "reference");
+  for (const std::string& target : ops::simd::supported_targets()) {
+    SCOPED_TRACE(c.inputs[0].shape().to_string() + ", " + target);
+    const ops::simd::ForcedTarget forced(target);
+    expect_same_bits(run_op(c, "rows"), expected);
+    expect_same_bits(run_op(c, "rows", {.threads = 3}), expected);
+  }
+}
+
 TEST(MaxPoolRows, AgreesWithTheReferenceOnRandomShapes) {
   Random random(31);
   for (int i = 0; i < 40; ++i) {
-    OpCase c = random_pool(random, "max_pool");
-    float* values = c.inputs[0].mutable_data();
-    for (int k = 0; k < 20; ++k) {
-      values[random.integer(0, c.inputs[0].elements() - 1)] =
-          random.pick(std::vector<float>{kNan, kInfinity, -kInfinity});
-    }
-    const Tensor expected = run_op(c, "reference");
-    for (const std::string& target : ops::simd::supported_targets()) {
-      SCOPED_TRACE(c.inputs[0].shape().to_string() + ", " + target);
-      const ops::simd::ForcedTarget forced(target);
-      expect_same_bits(run_op(c, "rows"), expected);
-    }
+    expect_rows_give_the_same_bits(random, random_pool(random, "max_pool"));
+  }
+}
+
+TEST(AdaptiveMaxPoolRows, AgreesWithTheReferenceOnRandomShapes) {
+  Random random(37);
+  for (int i = 0; i < 40; ++i) {
+    OpCase c{.op = "adaptive_max_pool",
+             .inputs = {random.tensor({random.integer(1, 3), random.integer(1, 150),
+                                       random.integer(1, 20), random.integer(1, 20)})}};
+    c.attributes.set("output_size", Pair{random.integer(1, 9), random.integer(1, 9)});
+    expect_rows_give_the_same_bits(random, c);
   }
 }
 
@@ -146,13 +162,15 @@ TEST(AvgPool, CountsPaddingOnlyWhenAsked) {
   }
 }
 
-TEST(AdaptiveAvgPool, EqualsAvgPoolWhereTheSizesDivide) {
+TEST(AdaptivePools, EqualThePoolsWhereTheSizesDivide) {
   Random random(36);
-  OpCase adaptive{.op = "adaptive_avg_pool", .inputs = {random.tensor({2, 9, 12, 8})}};
-  adaptive.attributes.set("output_size", Pair{4, 2});
-  OpCase average{.op = "avg_pool", .inputs = adaptive.inputs};
-  average.attributes.set("kernel_size", Pair{3, 4});
-  expect_same_bits(run_op(adaptive, "reference"), run_op(average, "reference"));
+  for (const std::string op : {"avg_pool", "max_pool"}) {
+    OpCase adaptive{.op = "adaptive_" + op, .inputs = {random.tensor({2, 9, 12, 8})}};
+    adaptive.attributes.set("output_size", Pair{4, 2});
+    OpCase pool{.op = op, .inputs = adaptive.inputs};
+    pool.attributes.set("kernel_size", Pair{3, 4});
+    expect_same_bits(run_op(adaptive, "reference"), run_op(pool, "reference"));
+  }
 }
 
 }  // namespace
