@@ -245,7 +245,7 @@ class _Tracer(fx.Tracer):
         if find_module_handler(m):
             return True
         # torch.nn's containers and composites have children and are traced through.
-        has_children = next(m.children(), None) is not None
+        has_children = next(m.children(), None) is not None or isinstance(m, nn.Sequential)
         own_weights = next(m.parameters(recurse=False), None) is not None
         return type(m).__module__.startswith("torch.nn.") and (own_weights or not has_children)
 
@@ -1500,6 +1500,11 @@ def _sub(site, input, other, *, alpha=1):
     return _add(site, input, _mul(site, other, -alpha))
 
 
+@handles(torch.addcmul, "addcmul")
+def _addcmul(site, input, tensor1, tensor2, *, value=1):
+    return _add(site, input, _mul(site, _mul(site, tensor1, tensor2), value))
+
+
 @handles(operator.neg, torch.neg, "neg")
 def _neg(site, input):
     return _mul(site, input, -1)
@@ -1517,6 +1522,8 @@ def _mul(site, input, other):
         return input * other
     if isinstance(other, Constant) and other.tensor.numel() == 1:
         other = float(other.tensor)
+    if isinstance(other, (int, float)) and other == 1:
+        return input
     if isinstance(input, Scores):
         return _scores_scaled(site, input, other)
     view = site.view(input)
@@ -1826,7 +1833,9 @@ def _upsample_module(site, m, input):
 # Handlers: shapes. Sizes need no reading: PyTorch's result says what came of them.
 
 
-@handles(torch.flatten, torch.reshape, "flatten", "reshape", "view", "unflatten", "view_as")
+@handles(
+    torch.flatten, torch.reshape, "flatten", "reshape", "reshape_as", "view", "view_as", "unflatten"
+)
 def _reshape(site, input, *_, **__):
     view = site.view(input)
     regrouped = _regrouped(view, site.result.shape)
@@ -1972,6 +1981,11 @@ def _sliced(site, view, dim, part):
 def _channels(site, view, dim, start, count):
     """A run of channels, axis `dim` of the view."""
     view = site.settled(view)
+    if view.axes[dim] != "C":
+        site.fail(
+            f"channels {start} to {start + count} of {view.axes[dim]} of {site.shown(view)}",
+            "cut all channels into equal parts, or cut before they are split into heads",
+        )
     axis = view.wire.sizes.index("C")
     return site.layer(
         "slice", [view], {"start": start, "count": count}, short="slice",
