@@ -18,6 +18,13 @@ namespace leadsman::ops::simd::HWY_NAMESPACE {
 
 namespace hn = hwy::HWY_NAMESPACE;
 
+// A vector register that inline assembly may have changed.
+#ifdef __aarch64__
+#define LEADSMAN_KEPT "+w"
+#else
+#define LEADSMAN_KEPT "+v"
+#endif
+
 // 12 chains of multiply-adds hide the latency and fit in 16 registers. Returns what keeps the
 // compiler from leaving it out; `flops` counts two for each multiply-add of a lane.
 float multiply_adds(std::int64_t steps, std::int64_t& flops) {
@@ -41,8 +48,12 @@ float multiply_adds(std::int64_t steps, std::int64_t& flops) {
     m = hn::MulAdd(m, factor, term);
 #if defined(__GNUC__) && HWY_TARGET != HWY_SCALAR && HWY_TARGET != HWY_EMU128
     // Otherwise the compiler sees that all chains are the same.
-    asm("" : "+v"(a.raw), "+v"(b.raw), "+v"(c.raw), "+v"(e.raw), "+v"(f.raw), "+v"(g.raw));
-    asm("" : "+v"(h.raw), "+v"(i.raw), "+v"(j.raw), "+v"(k.raw), "+v"(l.raw), "+v"(m.raw));
+    asm(""
+        : LEADSMAN_KEPT(a.raw), LEADSMAN_KEPT(b.raw), LEADSMAN_KEPT(c.raw), LEADSMAN_KEPT(e.raw),
+          LEADSMAN_KEPT(f.raw), LEADSMAN_KEPT(g.raw));
+    asm(""
+        : LEADSMAN_KEPT(h.raw), LEADSMAN_KEPT(i.raw), LEADSMAN_KEPT(j.raw), LEADSMAN_KEPT(k.raw),
+          LEADSMAN_KEPT(l.raw), LEADSMAN_KEPT(m.raw));
 #endif
   }
   flops = steps * 24 * static_cast<std::int64_t>(hn::Lanes(d));
