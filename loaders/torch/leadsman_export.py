@@ -1453,7 +1453,7 @@ def _add(site, input, other, *, alpha=1):
     if isinstance(other, Constant):
         return _add_constant(site, input, other)
     if isinstance(other, (int, float)):
-        return site.layer("scale", [site.settled(input)], {"offset": float(other)})
+        return _scale(site, site.settled(input), "add", offset=float(other))
     views = site.same_form([input, other])
     if views[0].wire.tensor.shape != views[1].wire.tensor.shape:
         site.fail(
@@ -1464,13 +1464,31 @@ def _add(site, input, other, *, alpha=1):
 
 
 def _add_constant(site, input, constant):
-    view = site.settled(input)
+    view = _upright(site, input)
     if view.wire.sizes == "NTC" and constant.tensor.shape[-2:] == view.wire.tensor.shape[-2:]:
         return _position_embed(site, view, constant)
     weight = _by_channel(site, view, constant)
     if not isinstance(weight, Constant):
-        return site.layer("scale", [view], {"offset": weight})
-    return site.layer("scale", [view], {}, {"bias": weight})
+        return _scale(site, view, "add", offset=weight)
+    return _scale(site, view, "add", bias=weight, by=constant)
+
+
+def _upright(site, value):
+    """Settled, and tokens that were turned for a mixing layer turned back."""
+    view = site.settled(value)
+    return site.plain(view) if view.axes == ("N", "C", "T") else view
+
+
+def _scale(site, view, short, factor=1.0, offset=0.0, weight=None, bias=None, by=None):
+    """One value for all or one a channel; `by` is the channels' constant as the program sees it.
+    The result is computed here: the node may go on with it."""
+    result = view.tensor() * factor + offset if weight is None and bias is None else (
+        view.tensor() * by.tensor if bias is None else view.tensor() + by.tensor
+    )  # fmt: skip
+    return site.layer(
+        "scale", [view], {"factor": factor, "offset": offset}, {"weight": weight, "bias": bias},
+        short=short, result=result.detach(),
+    )  # fmt: skip
 
 
 def _by_channel(site, view, constant):
@@ -1531,10 +1549,10 @@ def _mul(site, input, other):
         heads = any(f.letter == "C" and f.parts for axis in view.factors for f in axis)
         if view.chosen or heads:  # the product of queries and keys takes it in
             return dataclasses.replace(view, scaled=view.scaled * float(other), site=site)
-        return site.layer("scale", [site.settled(view)], {"factor": float(other)}, short="mul")
+        return _scale(site, site.settled(view), "mul", factor=float(other))
     if isinstance(other, Constant):
-        view = site.settled(view)
-        return site.layer("scale", [view], {}, {"weight": _by_channel(site, view, other)})
+        view = _upright(site, view)
+        return _scale(site, view, "mul", weight=_by_channel(site, view, other), by=other)
     views = site.same_form([view, other])
     shapes = [list(view.wire.tensor.shape) for view in views]
     if shapes[0] != shapes[1]:

@@ -264,11 +264,13 @@ class Rearranged(nn.Module):
         x = x.view(n, 3, 4, h, w).transpose(1, 2).reshape(n, c, h, w)
         x = torch.cat([x[:, :5], x[:, 5:] * 2.0 - 0.5], 1) * self.gain
         x = x + self.shift.view(1, -1, 1, 1)
+        x = x + (F.avg_pool2d(x, 3, 1, 1) - x) * self.gain
+        x = torch.addcmul(self.shift.view(-1, 1, 1), self.gain, x)
         s = x.mean((2, 3))
         x = x * torch.sigmoid(self.up(F.relu(self.down(s)))).view(n, c, 1, 1)
         tokens = torch.cat((self.first.expand(n, -1, -1), x.flatten(2).transpose(1, 2)), 1)
         tokens = tokens[:, 1:] + self.shift
-        tokens = tokens + self.mix(tokens.transpose(1, 2)).transpose(1, 2)
+        tokens = tokens + self.shift * self.mix(tokens.transpose(1, 2)).transpose(1, 2)
         y = tokens.transpose(1, 2).reshape(n, c, h, w)
         y = F.pad(y, (1, 0, 2, 1))[:, :, ::2, ::2]
         y = self.local(self.groups(F.interpolate(y, scale_factor=2, mode="nearest")))
