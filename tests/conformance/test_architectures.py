@@ -65,11 +65,10 @@ class Architectures(unittest.TestCase):
                 self.assertLess(abs(result.macs - expected), tolerance * expected)
 
 
-# At another size, the members of families that take little time.
+# At another size as well, what reacts to it differently: paddings, strides, windows, positions.
 AT_ANOTHER_SIZE = [
-    "alexnet", "convnext_tiny", "densenet121", "efficientnet_b0", "googlenet", "inception_v3",
-    "mnasnet0_5", "mobilenet_v2", "mobilenet_v3_small", "regnet_y_400mf", "resnet18",
-    "shufflenet_v2_x0_5", "squeezenet1_1", "swin_t", "swin_v2_t", "vit_b_16",
+    "convnext_tiny", "efficientnet_b0", "googlenet", "mobilenet_v2", "resnet18",
+    "shufflenet_v2_x0_5", "squeezenet1_1", "swin_t", "vit_b_16",
 ]  # fmt: skip
 
 
