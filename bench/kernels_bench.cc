@@ -1,6 +1,6 @@
 // Speed of the vector kernels on the shapes of published networks.
 //
-//   kernels_bench [--threads=N] [Google Benchmark's own options]
+//   kernels_bench [--threads=N] [--strategy=NAME] [Google Benchmark's own options]
 //
 // GFLOP/s counts two for each multiply-add. `best` and `median` are shares of the floating-point
 // peak that the same binary measures around each benchmark: of its fastest run and of its median
@@ -8,14 +8,15 @@
 // work on the machine disturbs less than the clock on the wall.
 //
 // Weights are cold, as in a network whose weights do not fit in the caches: each run takes the
-// next of several copies of the layer. LEADSMAN_SIMD selects the instruction set.
+// next of several copies of the layer. LEADSMAN_SIMD selects the instruction set; --strategy runs
+// another kernel than the planner would choose, where that one can.
 #include <algorithm>
 #include <array>
 #include <cstdio>
 #include <cstdlib>
-#include <cstring>
 #include <memory>
 #include <string>
+#include <string_view>
 #include <vector>
 
 #include <benchmark/benchmark.h>
@@ -31,6 +32,7 @@ namespace leadsman::bench {
 namespace {
 
 int thread_count = 1;
+std::string wanted_strategy;  // empty: the planner's choice
 
 struct Layer {
   std::string op;
@@ -61,9 +63,15 @@ void run_layer(benchmark::State& state, const Layer& layer) {
   }
   context.output = op.output_shape(context);
   const auto strategies = op.strategies();
-  const auto chosen = std::find_if(
-      strategies.begin(), strategies.end(),
-      [&](const ops::Strategy* strategy) { return strategy->refusal(context).empty(); });
+  const auto chosen =
+      std::find_if(strategies.begin(), strategies.end(), [&](const ops::Strategy* strategy) {
+        return strategy->refusal(context).empty() &&
+               (wanted_strategy.empty() || strategy->name() == wanted_strategy);
+      });
+  if (chosen == strategies.end()) {
+    state.SkipWithError("no such strategy for this layer");
+    return;
+  }
 
   // Enough copies that a layer's weights have left the second-level cache when it comes again.
   constexpr std::int64_t kColdBytes = 64 << 20;
@@ -200,9 +208,11 @@ int main(int argc, char** argv) {
   }
   std::vector<char*> rest;
   for (int i = 0; i < argc; ++i) {
-    constexpr const char* kOption = "--threads=";
-    if (std::strncmp(argv[i], kOption, std::strlen(kOption)) == 0) {
-      leadsman::bench::thread_count = std::max(1, std::atoi(argv[i] + std::strlen(kOption)));
+    const std::string_view argument(argv[i]);
+    if (argument.starts_with("--threads=")) {
+      leadsman::bench::thread_count = std::max(1, std::atoi(argv[i] + argument.find('=') + 1));
+    } else if (argument.starts_with("--strategy=")) {
+      leadsman::bench::wanted_strategy = argument.substr(argument.find('=') + 1);
     } else {
       rest.push_back(argv[i]);
     }

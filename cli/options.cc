@@ -39,6 +39,12 @@ void ModelOptions::add_to(CLI::App& command, bool with_size) {
   }
   command.add_option("--threads", threads, "Threads (default: the CPUs this process may use)")
       ->type_name("N");
+  command
+      .add_option("--accuracy", accuracy,
+                  "fast (default): large convolutions in fewer multiplications, a little more\n"
+                  "rounding; exact: every value one plain sum")
+      ->check(CLI::IsMember({"exact", "fast"}))
+      ->type_name("exact|fast");
   command.add_flag("--oracle", oracle, "Run the plain reference kernels, unfused (slow, exact)");
 }
 
@@ -50,6 +56,7 @@ PlanOptions ModelOptions::plan_options(const Bundle& model) const {
   PlanOptions plan;
   plan.input_shapes = input_shapes_at(model.graph, 1, height, width);
   plan.threads = threads;
+  plan.accuracy = parsed_accuracy();
   plan.reference_kernels = oracle;
   return plan;
 }

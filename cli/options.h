@@ -17,10 +17,14 @@ struct ModelOptions {
   std::string bundle;
   std::string size;  ///< "HxW", "S" or empty
   int threads = 0;
+  std::string accuracy = "fast";
   bool oracle = false;
 
   void add_to(CLI::App& command, bool with_size = true);
   std::pair<std::int64_t, std::int64_t> parsed_size() const { return parse_size(size); }
+  Accuracy parsed_accuracy() const {
+    return accuracy == "exact" ? Accuracy::kExact : Accuracy::kFast;
+  }
   PlanOptions plan_options(const Bundle& model) const;
 };
 

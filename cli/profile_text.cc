@@ -35,18 +35,6 @@ std::vector<std::pair<std::string, Work>> by_kernel(const Plan& plan, const Prof
   return sorted;
 }
 
-double steps_seconds(const Profile& profile) {
-  double sum = 0.0;
-  for (const PartTime& step : profile.steps) sum += step.best_seconds;
-  return sum;
-}
-
-// Everything but steps and input: differences of sums of best times may be slightly negative.
-double rest_seconds(const Profile& profile) {
-  return std::max(0.0,
-                  profile.whole.best_seconds - steps_seconds(profile) - profile.input.best_seconds);
-}
-
 double gflops(double seconds, std::int64_t macs) {
   return seconds > 0.0 ? 2e-9 * static_cast<double>(macs) / seconds : 0.0;
 }
@@ -103,7 +91,7 @@ void print_profile(std::ostream& out, const Plan& plan, const Profile& profile, 
     add(kernels, {name, std::to_string(work.steps)}, work.seconds, work.macs);
   }
   add(kernels, {"(input to memory order)", ""}, profile.input.best_seconds, 0);
-  add(kernels, {"(the plan itself)", ""}, rest_seconds(profile), 0);
+  add(kernels, {"(the plan itself)", ""}, profile.plan.best_seconds, 0);
   add(kernels, {"whole run", ""}, whole, plan.macs());
   kernels.print(out);
   out << "\nbest of " << counted(profile.whole.runs, "run") << ", "
@@ -118,7 +106,7 @@ Json profile_json(const Plan& plan, const Profile& profile, double peak) {
                    {"peak_gflops", peak * 1e-9},
                    {"seconds", profile.whole.best_seconds},
                    {"input_seconds", profile.input.best_seconds},
-                   {"plan_seconds", rest_seconds(profile)},
+                   {"plan_seconds", profile.plan.best_seconds},
                    {"steps", Json::array()}};
   for (std::size_t i = 0; i < plan.steps().size(); ++i) {
     const StepSummary& step = plan.steps()[i];

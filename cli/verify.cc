@@ -33,10 +33,12 @@ void print_json(const Comparison& comparison, const VerifyOptions& options) {
   document["bundle"] = options.model.bundle;
   document["reference"] = options.reference;
   document["mode"] = options.mode;
+  document["accuracy"] = options.model.accuracy;
   document["layers"] = Json::array();
   for (const LayerComparison& layer : comparison.layers) {
     Json row = {{"layer", layer.layer},
                 {"operator", layer.operator_name},
+                {"kernel", layer.kernel},
                 {"relative_l2", number(layer.relative_l2)},
                 {"max_over_rms", number(layer.max_over_rms)},
                 {"cosine", number(layer.cosine)},
@@ -99,6 +101,11 @@ void print_table(const Comparison& comparison, const VerifyOptions& options) {
   if (!comparison.missing.empty()) {
     std::cout << "; " << comparison.missing.size() << " are not in the reference";
   }
+  if (const auto count = std::ranges::count_if(comparison.layers, [](const LayerComparison& layer) {
+        return layer.kernel.starts_with("winograd");
+      })) {
+    std::cout << "; " << count << " in fewer multiplications";
+  }
   std::cout << "\nnearest to its limit: " << comparison.worst_layer << ", at "
             << digits(comparison.worst_ratio, 2) << " of it\n"
             << "output of the whole run: relative error "
@@ -140,6 +147,7 @@ Command add_verify(CLI::App& app) {
     compare_options.mode =
         options->mode == "chained" ? CompareMode::kChained : CompareMode::kIsolated;
     compare_options.threads = options->model.threads;
+    compare_options.accuracy = options->model.parsed_accuracy();
     compare_options.reference_kernels = options->model.oracle;
     Comparison comparison;
     {

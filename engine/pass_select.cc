@@ -19,6 +19,7 @@ void select_kernel(Step& step, bool reference) {
     }
   }
   step.strategy = chosen->name();
+  step.rounding_growth = chosen->rounding_growth();
   step.kernel = chosen->prepare(step.context, step.epilogue);
 }
 
@@ -41,6 +42,7 @@ void select_kernels(PlanState& plan) {
       step.strategy = "view";
       continue;
     }
+    step.context.direct_sums = plan.options.accuracy == Accuracy::kExact;
     select_kernel(step, plan.options.reference_kernels);
     plan.packed_bytes += step.kernel->packed_bytes();
     if (step.kernel->packed_bytes() == 0) plan.weight_bytes += weights_size(step.context);

@@ -22,7 +22,12 @@ void summarize_steps(internal::PlanState& plan) {
     for (const std::string& layer : step.layers) step_of[layer] = plan.step_summaries.size();
     plan.step_summaries.push_back(summarize(plan, step));
   }
-  for (LayerSummary& layer : plan.layers) layer.step = step_of.at(layer.name);
+  for (LayerSummary& layer : plan.layers) {
+    layer.step = step_of.at(layer.name);
+    const internal::Step& step = plan.steps[layer.step];
+    // What a step took in behind its first layer is done to each finished sum.
+    if (layer.name == step.layers.front()) layer.rounding_growth = step.rounding_growth;
+  }
 }
 
 // Free sizes of one input: the batch, then height and width (of images) or the tokens' number.

@@ -33,6 +33,7 @@ struct Step {
   std::optional<ValueId> residual;
   ops::Epilogue epilogue;
   std::string strategy;
+  double rounding_growth = 1.0;  ///< of the strategy
   std::vector<std::string> refusals;
   std::int64_t macs = 0;
   bool is_view = false;                 ///< nothing to run: the output is the input's memory

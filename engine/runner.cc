@@ -125,16 +125,25 @@ void Runner::run(std::span<const Tensor> inputs) {
     }
     copy_from_logical(inputs[i].data(), s.values[i]);
   }
-  if (s.profiling) record(s.profile.input, Clock::now() - begin);
+  Clock::duration parts{0};
+  if (s.profiling) record(s.profile.input, parts = Clock::now() - begin);
   for (std::size_t i = 0; i < p.steps.size(); ++i) {
     const internal::Step& step = p.steps[i];
     if (step.is_view) continue;
     const Clock::time_point start = s.profiling ? Clock::now() : Clock::time_point{};
     step.kernel->run(s.calls[i]);
-    if (s.profiling) record(s.profile.steps[i], Clock::now() - start);
+    if (s.profiling) {
+      const Clock::duration elapsed = Clock::now() - start;
+      record(s.profile.steps[i], elapsed);
+      parts += elapsed;
+    }
     if (!s.hooks[i].empty()) s.call_hooks(i, step.layers.back(), s.calls[i].output);
   }
-  if (s.profiling) record(s.profile.whole, Clock::now() - begin);
+  if (s.profiling) {
+    const Clock::duration elapsed = Clock::now() - begin;
+    record(s.profile.whole, elapsed);
+    record(s.profile.plan, elapsed - parts);
+  }
 }
 
 ConstTensorView Runner::output(std::size_t index) const {

@@ -30,6 +30,7 @@ class Comparer {
       : graph_(graph), weights_(weights), reference_(reference), options_(options) {
     for (const GraphInput& input : graph.inputs) inputs_.push_back(need(reference, input.name));
     plan_options_.threads = options.threads;
+    plan_options_.accuracy = options.accuracy;
     plan_options_.reference_kernels = options.reference_kernels;
     for (const Tensor& input : inputs_) plan_options_.input_shapes.push_back(input.shape());
     plan_ = Plan::make(graph, weights, plan_options_);
@@ -76,8 +77,7 @@ class Comparer {
         result_.missing.push_back(layer.name);
         continue;
       }
-      const Tensor ours =
-          run_layer(layer, weights_, inputs, options_.threads, options_.reference_kernels);
+      const Tensor ours = run_layer(layer, weights_, inputs, plan_options_);
       add(i, ours, *expected, inputs, /*inherited=*/0.0);
     }
     report_progress(plan_->layers().size());
@@ -116,8 +116,8 @@ class Comparer {
     LayerComparison row;
     if (ours.shape() == expected.shape()) {
       row = measure_difference(ours, expected);
-      const RoundingModel model = rounding_model(layer, weights_, plan_->layers()[i].reduction,
-                                                 inputs, expected, options_.threads);
+      const RoundingModel model =
+          rounding_model(layer, weights_, plan_->layers()[i], inputs, expected, options_.threads);
       row.threshold = model.own + kPropagation * model.gain * inherited;
       row.ratio = row.relative_l2 / row.threshold;
       if (!std::isfinite(row.relative_l2)) row.remark = "not finite";
@@ -129,6 +129,8 @@ class Comparer {
     if (!std::isfinite(row.ratio)) row.ratio = std::numeric_limits<double>::infinity();
     row.layer = layer.name;
     row.operator_name = layer.operator_name;
+    const StepSummary& step = plan_->steps()[plan_->layers()[i].step];
+    if (step.layers.front() == layer.name) row.kernel = step.strategy;
     row.departs = row.ratio > 1.0;
     // What a layer brought in by rounding is passed on as it was measured, since bounds multiplied
     // over a hundred layers would allow anything; a departure excuses nobody after it.

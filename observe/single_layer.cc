@@ -5,13 +5,11 @@
 namespace leadsman {
 
 Tensor run_layer(const Layer& layer, const WeightMap& weights, std::span<const Tensor> inputs,
-                 int threads, bool reference_kernels) {
+                 PlanOptions options) {
   Graph graph;
   graph.name = layer.name;
   Layer alone = layer;
-  PlanOptions options;
-  options.threads = threads;
-  options.reference_kernels = reference_kernels;
+  options.input_shapes.clear();
   for (std::size_t i = 0; i < inputs.size(); ++i) {
     // The layer may read one tensor twice: each use becomes an input of its own.
     alone.inputs[i] = "input " + std::to_string(i);

@@ -3,13 +3,13 @@
 
 #include <span>
 
-#include "leadsman/graph.h"
+#include "leadsman/plan.h"
 
 namespace leadsman {
 
-/// Plans a graph of this layer only and runs it. `inputs` are logical, one for each of the
-/// layer's. Throws what Plan::make throws.
+/// Plans a graph of this layer only, with `options` but for the input shapes, and runs it. `inputs`
+/// are logical, one for each of the layer's. Throws what Plan::make throws.
 Tensor run_layer(const Layer& layer, const WeightMap& weights, std::span<const Tensor> inputs,
-                 int threads, bool reference_kernels);
+                 PlanOptions options);
 
 }  // namespace leadsman

@@ -57,7 +57,9 @@ double squared_products_gain(const Question& q) {
   WeightMap squares;
   for (const auto& [role, name] : q.layer.weights) squares[name] = squared(*q.weight(role));
   const Tensor input = squared(q.inputs[0]);
-  const Tensor sums = run_layer(q.layer, squares, {&input, 1}, q.threads, false);
+  PlanOptions options;
+  options.threads = q.threads;
+  const Tensor sums = run_layer(q.layer, squares, {&input, 1}, options);
   double total = 0.0;
   for (const float value : sums.values()) total += static_cast<double>(value);
   return ratio_or_one(std::sqrt(total), norm(q.output));
@@ -234,17 +236,19 @@ Gain gain_of(const std::string& op) {
 
 }  // namespace
 
-RoundingModel rounding_model(const Layer& layer, const WeightMap& weights, std::int64_t reduction,
-                             std::span<const Tensor> inputs, const Tensor& output, int threads) {
+RoundingModel rounding_model(const Layer& layer, const WeightMap& weights,
+                             const LayerSummary& summary, std::span<const Tensor> inputs,
+                             const Tensor& output, int threads) {
   const Question question{
-      layer,  weights, static_cast<double>(std::max<std::int64_t>(reduction, 1)),
+      layer,  weights, static_cast<double>(std::max<std::int64_t>(summary.reduction, 1)),
       inputs, output,  threads};
   const Gain gain = gain_of(layer.operator_name);
   RoundingModel model;
   if (gain != nullptr) model.gain = gain(question);
   // A function's own error does not cancel: its gain matters to what flows in, not to what it adds.
-  const double summed =
-      layer.operator_name == "activation" ? 1.0 : std::sqrt(question.reduction) * model.gain;
+  const double summed = layer.operator_name == "activation"
+                            ? 1.0
+                            : std::sqrt(question.reduction) * summary.rounding_growth * model.gain;
   model.own = kUnitRoundoff * (kSumConstant * summed + kFunctionUlps);
   return model;
 }

@@ -10,17 +10,19 @@
 //
 // The threshold on the relative L2 error of a layer whose inputs are exact is
 //
-//   u * (kSumConstant * sqrt(K) * gain + kFunctionUlps)
+//   u * (kSumConstant * sqrt(K) * growth * gain + kFunctionUlps)
 //
-// with a second term for the rounding of the result and of functions such as exp. The constants
-// cover both libraries' errors; what they leave as a margin is measured in
-// tests/observe/threshold_test.cc. The gain is also by how much independent relative errors of the
-// inputs grow on their way through the layer, which chained comparison needs.
+// where growth is what the kernel's own way of summing adds (1 for plain sums; for Winograd's
+// convolution ops/conv2d/winograd.h derives it from the matrices), with a second term for the
+// rounding of the result and of functions such as exp. The constants cover both libraries' errors;
+// what they leave as a margin is measured in tests/observe/threshold_test.cc. The gain is also by
+// how much independent relative errors of the inputs grow on their way through the layer, which
+// chained comparison needs.
 #pragma once
 
 #include <span>
 
-#include "leadsman/graph.h"
+#include "leadsman/plan.h"
 
 namespace leadsman {
 
@@ -29,8 +31,10 @@ struct RoundingModel {
   double gain = 1.0;  ///< growth of the relative error of its inputs
 };
 
-/// `reduction` is the layer's cost().reduction. `inputs` and `output` are the reference's.
-RoundingModel rounding_model(const Layer& layer, const WeightMap& weights, std::int64_t reduction,
-                             std::span<const Tensor> inputs, const Tensor& output, int threads);
+/// `summary` is the layer's in the plan: of it, reduction and rounding_growth count. `inputs` and
+/// `output` are the reference's.
+RoundingModel rounding_model(const Layer& layer, const WeightMap& weights,
+                             const LayerSummary& summary, std::span<const Tensor> inputs,
+                             const Tensor& output, int threads);
 
 }  // namespace leadsman

@@ -63,6 +63,8 @@ struct OpContext {
   std::vector<Shape> inputs;
   std::map<std::string, Tensor, std::less<>> weights;
   Shape output;  ///< set once output_shape() has run
+  /// True: each value must be one sum of the formula's own products (Accuracy::kExact).
+  bool direct_sums = false;
 
   const Tensor* weight(std::string_view role) const {
     const auto found = weights.find(role);
@@ -106,6 +108,9 @@ class Strategy {
   virtual std::string_view name() const = 0;
   /// Why this strategy cannot or should not compute this layer; empty when it does.
   virtual std::string refusal(const OpContext& context) const = 0;
+  /// How much larger rounding errors are than those of plain sums of Cost::reduction products,
+  /// as root mean squares; at least 1. Comparison derives its threshold from it.
+  virtual double rounding_growth() const { return 1.0; }
   /// Requires refusal(context).empty().
   virtual std::unique_ptr<Kernel> prepare(const OpContext& context,
                                           const Epilogue& epilogue) const = 0;

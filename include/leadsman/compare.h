@@ -6,7 +6,7 @@
 #include <string>
 #include <vector>
 
-#include "leadsman/graph.h"
+#include "leadsman/plan.h"
 
 namespace leadsman {
 
@@ -24,7 +24,8 @@ enum class CompareMode {
 
 struct CompareOptions {
   CompareMode mode = CompareMode::kIsolated;
-  int threads = 0;
+  int threads = 0;  ///< this and the next two as in PlanOptions
+  Accuracy accuracy = Accuracy::kFast;
   bool reference_kernels = false;
   /// Called before each layer with (done, total).
   std::function<void(std::size_t, std::size_t)> progress;
@@ -33,6 +34,7 @@ struct CompareOptions {
 struct LayerComparison {
   std::string layer;
   std::string operator_name;
+  std::string kernel;         ///< "winograd4"; empty where it is not the first layer of a step
   double relative_l2 = 0.0;   ///< ||ours - reference|| / ||reference||
   double max_over_rms = 0.0;  ///< largest |ours - reference| / root mean square of the reference
   double cosine = 1.0;        ///< of the angle between the two

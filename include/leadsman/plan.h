@@ -14,6 +14,16 @@
 
 namespace leadsman {
 
+/// What kernels may do to the order of sums.
+enum class Accuracy {
+  kExact,  ///< each value is one sum of the products that the layer's formula names
+  /// 3x3 convolutions may use minimal filtering (Winograd): fewer products, and up to twice the
+  /// rounding error in a layer, which compare() allows for. Relative L2 error of a whole model's
+  /// output against the reference kernels, kExact / kFast: ResNet-18 5.1e-7 / 4.9e-7, ResNet-50
+  /// 9.3e-7 / 9.6e-7, VGG-16 2.1e-6 / 1.8e-6, DenseNet-121 1.1e-6 / 1.4e-6.
+  kFast,
+};
+
 struct PlanOptions {
   /// One logical shape for each graph input. Empty: batch 1 at the graph's usual size.
   std::vector<Shape> input_shapes;
@@ -22,6 +32,7 @@ struct PlanOptions {
   /// How long threads may spin, from one step of a run to the next, before they sleep; between runs
   /// they always sleep. 0 saves power and costs speed: waking a thread takes tens of microseconds.
   std::chrono::microseconds spin{200};
+  Accuracy accuracy = Accuracy::kFast;
   /// True: the plain reference kernels only, one step a layer, nothing fused: the oracle.
   bool reference_kernels = false;
   /// Layers (names or globs) whose outputs hooks will ask for. Fusion is cut after these layers
@@ -39,6 +50,7 @@ struct LayerSummary {
   std::int64_t macs = 0;
   std::int64_t activation_bytes = 0;
   std::int64_t reduction = 1;  ///< length of the longest sum behind one value
+  double rounding_growth = 1;  ///< of its kernel: rounding errors, in those of plain sums
   std::size_t step = 0;        ///< the step that computes it
 };
 
@@ -47,7 +59,7 @@ struct StepSummary {
   std::vector<std::string> layers;  ///< in graph order; the last one's output is the step's
   std::string operator_name;
   std::string strategy;               ///< name of the chosen kernel
-  std::vector<std::string> refusals;  ///< "winograd: stride is 2, needs 1"
+  std::vector<std::string> refusals;  ///< "winograd4: the stride is not 1"
   Shape output;
   std::int64_t macs = 0;
 };

@@ -13,12 +13,12 @@ struct PartTime {
   double best_seconds = 0.0;
 };
 
-/// Each figure but `whole` takes two readings of the clock a run. What `whole` holds beside the
-/// others is the plan itself: walking its steps, hooks, and reading the clock.
 struct Profile {
   std::vector<PartTime> steps;  ///< indexed as Plan::steps()
   PartTime input;               ///< inputs from logical to memory order
   PartTime whole;               ///< from input to output
+  /// What a run takes beside input and steps: walking the plan, hooks, reading the clock.
+  PartTime plan;
 };
 
 /// FLOP/s (two a multiply-add) that `threads` threads reach together in registers, with the

@@ -30,13 +30,16 @@ double ratio_of(const Layered& c) {
   check_graph(graph);
   const Layer& layer = graph.layers[0];
   const std::span<const Tensor> inputs(&c.input, 1);
-  const Tensor fast = run_layer(layer, c.builder.weights(), inputs, 2, false);
-  const Tensor oracle = run_layer(layer, c.builder.weights(), inputs, 2, true);
   PlanOptions options;
+  options.threads = 2;
+  const Tensor fast = run_layer(layer, c.builder.weights(), inputs, options);
+  options.reference_kernels = true;
+  const Tensor oracle = run_layer(layer, c.builder.weights(), inputs, options);
+  options.reference_kernels = false;
   options.input_shapes = {c.input.shape()};
   const auto plan = Plan::make(graph, c.builder.weights(), options);
   const RoundingModel model =
-      rounding_model(layer, c.builder.weights(), plan->layers()[0].reduction, inputs, oracle, 2);
+      rounding_model(layer, c.builder.weights(), plan->layers()[0], inputs, oracle, 2);
   EXPECT_GE(model.gain, 1.0);
   return measure_difference(fast, oracle).relative_l2 / model.own;
 }

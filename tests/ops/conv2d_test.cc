@@ -9,6 +9,7 @@
 #include <gtest/gtest.h>
 
 #include "leadsman/error.h"
+#include "tests/ops/conv_case.h"
 #include "tests/ops/tables.h"
 #include "tests/support/compare.h"
 #include "tests/support/fast_against_reference.h"
@@ -18,43 +19,6 @@
 
 namespace leadsman::testing {
 namespace {
-
-using Integers = std::vector<std::int64_t>;
-
-struct Geometry {
-  std::int64_t n = 1, c = 1, h = 1, w = 1, out_c = 1;
-  Integers kernel = {1, 1}, stride = {1, 1}, padding = {0, 0, 0, 0}, dilation = {1, 1};
-  std::int64_t groups = 1;
-};
-
-OpCase conv_case(Random& random, const Geometry& g, bool bias) {
-  OpCase c{.op = "conv2d"};
-  c.inputs = {random.tensor({g.n, g.c, g.h, g.w})};
-  c.weights["weight"] = random.tensor({g.out_c, g.c / g.groups, g.kernel[0], g.kernel[1]});
-  if (bias) c.weights["bias"] = random.tensor({g.out_c});
-  c.attributes.set("kernel_size", g.kernel);
-  c.attributes.set("stride", g.stride);
-  c.attributes.set("padding", g.padding);
-  c.attributes.set("dilation", g.dilation);
-  c.attributes.set("groups", g.groups);
-  return c;
-}
-
-std::string describe(const OpCase& c) {
-  std::ostringstream text;
-  text << "input " << c.inputs[0].shape().to_string() << " weight "
-       << c.weights.at("weight").shape().to_string();
-  for (const auto& [name, value] : c.attributes.values()) {
-    text << ' ' << name;
-    if (const auto* list = std::get_if<Integers>(&value)) {
-      for (const auto i : *list) text << ' ' << i;
-    }
-    if (const auto* one = std::get_if<std::int64_t>(&value)) text << ' ' << *one;
-  }
-  text << " activation " << ops::activation_name(c.activation.kind);
-  if (c.residual.data() != nullptr) text << " residual";
-  return text.str();
-}
 
 Geometry random_geometry(Random& random) {
   constexpr std::array<std::int64_t, 11> kChannels = {1, 2, 3, 4, 5, 16, 17, 31, 33, 48, 64};
@@ -174,9 +138,11 @@ TEST(Conv2dDepthwise, RefusesWhatIsNotDepthwise) {
   EXPECT_EQ(refusal(conv_case(random, {.c = 4, .out_c = 8, .groups = 4}, false), "depthwise"), "");
 }
 
-// Every strategy that takes a case, on every target.
+// Every strategy of direct sums that takes a case, on every target. (conv2d_winograd_test.cc has
+// what holds for the others.)
 template <typename Body>
-void on_every_strategy(const OpCase& c, const Body& body) {
+void on_every_strategy(OpCase c, const Body& body) {
+  c.direct_sums = true;
   for (const std::string& strategy : strategy_names("conv2d")) {
     if (!refusal(c, strategy).empty()) continue;
     SCOPED_TRACE(strategy);

@@ -107,6 +107,7 @@ ops::OpContext op_context(const OpCase& c) {
   context.attributes = ops::complete_attributes(op.contract(), c.attributes);
   for (const Tensor& input : c.inputs) context.inputs.push_back(input.shape());
   context.weights = c.weights;
+  context.direct_sums = c.direct_sums;
   context.output = op.output_shape(context);
   return context;
 }

@@ -27,6 +27,7 @@ struct OpCase {
   std::map<std::string, Tensor, std::less<>> weights = {};
   ops::Activation activation = {};  ///< of the epilogue
   Tensor residual = {};             ///< of the epilogue; default-made: none
+  bool direct_sums = false;         ///< OpContext::direct_sums
 };
 
 struct RunOptions {
