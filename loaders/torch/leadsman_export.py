@@ -2724,12 +2724,17 @@ def vary_constant_parameters(module, seed=0):
             parameter.copy_(value + spread * noise)
 
 
-def quieten_residual_branches(module):
-    """Sets the last gain of the residual branches of torchvision's blocks to 0, as they are trained
-    (Goyal et al. 2017): with gains of 1 all the way, deep networks of random weights are chaotic,
-    and blow roundings up by factors of thousands.
+def calm_down(module):
+    """Keeps networks of random weights from blowing up every rounding, by factors of thousands in
+    deep ones, which those of training do not.
+
+    The last gain of the residual branches of torchvision's blocks becomes 0, as they are trained
+    (Goyal et al. 2017). Batch normalisation and ReLU without residuals are chaotic as well (Yang et
+    al. 2019, "A mean field theory of batch normalization"): there the shifts become 0.5, so that
+    more values are on the linear side.
     """
     always = ("BasicBlock", "Bottleneck", "ResBottleneckBlock")
+    residuals = False
     for block in module.modules():
         residual = getattr(block, "use_res_connect", getattr(block, "apply_residual", None))
         if not (type(block).__name__ in always if residual is None else residual):
@@ -2737,7 +2742,12 @@ def quieten_residual_branches(module):
         shortcut = getattr(block, "downsample", None) or getattr(block, "proj", None)
         skipped = set(shortcut.modules()) if shortcut is not None else set()
         norms = [m for m in block.modules() if isinstance(m, nn.BatchNorm2d) and m not in skipped]
-        nn.init.zeros_(norms[-1].weight)
+        if norms:
+            nn.init.zeros_(norms[-1].weight)
+            residuals = True
+    for m in module.modules():
+        if isinstance(m, nn.BatchNorm2d) and not residuals and m.bias is not None:
+            nn.init.constant_(m.bias, 0.5)
 
 
 def settle_batch_norm(module, inputs):
@@ -2833,7 +2843,7 @@ def _only_square(name, size):
 
 def settle(module, size, seed=0):
     """Gives a seeded module values that training might have given: see the functions called."""
-    quieten_residual_branches(module)
+    calm_down(module)
     vary_constant_parameters(module, seed)
     settle_batch_norm(module, picture_like(8, *size, seed=seed + 2))
 
