@@ -137,8 +137,8 @@ TEST(Winograd, NonFiniteValuesReachEveryWindowThatSeesThemAndStayInTheirTiles) {
   Random random(43);
   for (const float value :
        {std::numeric_limits<float>::quiet_NaN(), std::numeric_limits<float>::infinity()}) {
-    for (const auto& [strategy, side] :
-         {std::pair<std::string, std::int64_t>{"winograd2", 8}, {"winograd4", 20}}) {
+    for (const std::string strategy : {"winograd2", "winograd4"}) {
+      const std::int64_t side = strategy == "winograd2" ? 8 : 20;
       const std::int64_t channels = strategy == "winograd2" ? 96 : 32;
       OpCase c = conv_case(random, same_3x3(channels, channels, side, side), true);
       ASSERT_EQ(refusal(c, strategy), "");
