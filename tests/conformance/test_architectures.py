@@ -36,8 +36,10 @@ PAPERS_MACS = {
     "vit_b_16": (17.6e9, 0.01),
 }
 
-# Of what torchvision counts: in Swin V2, the network that computes the positions' table, too.
+# Of what torchvision counts: in Swin V2, the network that computes the positions' table, too. Its
+# figures have three decimals.
 COUNTING = 0.005
+ROUNDING = 0.5e6
 
 # Logits' relative L2 error with direct kernels.
 LOGITS_LIMIT = 2e-5
@@ -59,7 +61,7 @@ class Architectures(unittest.TestCase):
         self.assertEqual(result.parameters, result.published_parameters)
         if size is None:
             expected = GIGA_MACS[name] * 1e9
-            self.assertLess(abs(result.macs - expected), COUNTING * expected)
+            self.assertLess(abs(result.macs - expected), COUNTING * expected + ROUNDING)
             if name in PAPERS_MACS:
                 expected, tolerance = PAPERS_MACS[name]
                 self.assertLess(abs(result.macs - expected), tolerance * expected)
