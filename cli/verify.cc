@@ -6,9 +6,11 @@
 
 #include "commands.h"
 #include "leadsman/compare.h"
+#include "leadsman/compare_picture.h"
 #include "leadsman/error.h"
 #include "leadsman/tensor_file.h"
 #include "options.h"
+#include "picture_text.h"
 #include "text.h"
 
 namespace leadsman::cli {
@@ -17,33 +19,31 @@ namespace {
 struct VerifyOptions {
   ModelOptions model;
   std::string reference;
+  std::string image;
   std::string mode = "isolated";
   bool json = false;
 };
 
 using Json = nlohmann::ordered_json;
 
-// JSON has no infinity: null says that the figure is none.
-Json number(double value) {
-  return std::isfinite(value) ? Json(value) : Json(nullptr);
-}
-
-void print_json(const Comparison& comparison, const VerifyOptions& options) {
+// What is not finite becomes null.
+void print_json(const Comparison& comparison, const Json& picture, const VerifyOptions& options) {
   Json document;
   document["bundle"] = options.model.bundle;
   document["reference"] = options.reference;
   document["mode"] = options.mode;
   document["accuracy"] = options.model.accuracy;
+  if (!picture.is_null()) document["picture"] = picture;
   document["layers"] = Json::array();
   for (const LayerComparison& layer : comparison.layers) {
     Json row = {{"layer", layer.layer},
                 {"operator", layer.operator_name},
                 {"kernel", layer.kernel},
-                {"relative_l2", number(layer.relative_l2)},
-                {"max_over_rms", number(layer.max_over_rms)},
-                {"cosine", number(layer.cosine)},
-                {"threshold", number(layer.threshold)},
-                {"ratio", number(layer.ratio)},
+                {"relative_l2", layer.relative_l2},
+                {"max_over_rms", layer.max_over_rms},
+                {"cosine", layer.cosine},
+                {"threshold", layer.threshold},
+                {"ratio", layer.ratio},
                 {"departs", layer.departs}};
     if (!layer.remark.empty()) row["remark"] = layer.remark;
     document["layers"].push_back(std::move(row));
@@ -51,9 +51,9 @@ void print_json(const Comparison& comparison, const VerifyOptions& options) {
   document["missing"] = comparison.missing;
   document["first_departure"] =
       comparison.first_departure.empty() ? Json(nullptr) : Json(comparison.first_departure);
-  document["worst_ratio"] = number(comparison.worst_ratio);
+  document["worst_ratio"] = comparison.worst_ratio;
   document["worst_layer"] = comparison.worst_layer;
-  document["output_relative_l2"] = number(comparison.output_relative_l2);
+  document["output_relative_l2"] = comparison.output_relative_l2;
   std::cout << document.dump(2) << '\n';
 }
 
@@ -115,6 +115,84 @@ void print_table(const Comparison& comparison, const VerifyOptions& options) {
   }
 }
 
+class Verifier {
+ public:
+  explicit Verifier(const VerifyOptions& options)
+      : options_(options), model_(load_bundle(options.model.bundle)) {
+    if (options_.reference.empty()) options_.reference = model_.reference_path;
+    if (options_.reference.empty()) {
+      throw_usage(options_.model.bundle + " holds no reference.safetensors; give --reference FILE");
+    }
+  }
+
+  int run() {
+    const TensorFile file = TensorFile::open(options_.reference);
+    const ReferenceSource source = [&](const std::string& name) -> std::optional<Tensor> {
+      if (!file.has(name)) return std::nullopt;
+      return file.read(name);
+    };
+    std::optional<PictureComparison> picture;
+    if (!options_.image.empty()) picture = compare_stages(source);
+    const Comparison layers = compare_layers(source);
+    if (options_.json) {
+      print_json(layers, picture ? picture_json(*picture, options_.image, model_.labels) : Json(),
+                 options_);
+    } else {
+      if (picture) {
+        print_picture(std::cout, *picture, model_.labels);
+        std::cout << '\n';
+      }
+      print_table(layers, options_);
+    }
+    const bool departs =
+        !layers.first_departure.empty() || (picture && !picture->first_departure.empty());
+    return departs ? 1 : 0;
+  }
+
+ private:
+  // Shapes that do not fit the graph come from the file here, not from the command line.
+  template <typename Function>
+  auto blaming_reference(const Function& function) const {
+    try {
+      return function();
+    } catch (const Error& error) {
+      throw Error(error.kind() == ErrorKind::kUsage ? ErrorKind::kInput : error.kind(),
+                  options_.reference + ": " + error.what());
+    }
+  }
+
+  PictureComparison compare_stages(const ReferenceSource& source) const {
+    if (!model_.preprocess) {
+      throw_input(options_.model.bundle + ": graph.json has no 'preprocess' to compare");
+    }
+    const Picture decoded = read_picture(options_.image, model_.preprocess->orientation);
+    PictureCompareOptions options;
+    options.decoder_levels = is_jpeg(options_.image) ? kJpegDecoderLevels : 0;
+    options.plan.threads = options_.model.threads;
+    options.plan.accuracy = options_.model.parsed_accuracy();
+    options.plan.reference_kernels = options_.model.oracle;
+    return blaming_reference([&] {
+      return compare_picture(decoded, *model_.preprocess, model_.graph, model_.weights, source,
+                             options);
+    });
+  }
+
+  Comparison compare_layers(const ReferenceSource& source) const {
+    Progress progress("comparing layer");
+    CompareOptions options;
+    options.mode = options_.mode == "chained" ? CompareMode::kChained : CompareMode::kIsolated;
+    options.threads = options_.model.threads;
+    options.accuracy = options_.model.parsed_accuracy();
+    options.reference_kernels = options_.model.oracle;
+    options.progress = [&](std::size_t done, std::size_t total) { progress.show(done, total); };
+    return blaming_reference(
+        [&] { return compare(model_.graph, model_.weights, source, options); });
+  }
+
+  VerifyOptions options_;
+  Bundle model_;
+};
+
 }  // namespace
 
 Command add_verify(CLI::App& app) {
@@ -127,49 +205,16 @@ Command add_verify(CLI::App& app) {
                    "Tensors of another library (default: reference.safetensors in the bundle)")
       ->type_name("FILE");
   command
+      ->add_option("--image", options->image,
+                   "The picture that the reference was made from: compare its stages, too")
+      ->type_name("FILE");
+  command
       ->add_option("--mode", options->mode,
                    "isolated: each layer gets the reference's inputs; chained: ours flow on")
       ->check(CLI::IsMember({"isolated", "chained"}));
   command->add_flag("--json", options->json, "One JSON object");
   command->footer("Example: leadsman verify examples/buttons/bundles/conv --mode chained");
-  return [options] {
-    const Bundle model = load_bundle(options->model.bundle);
-    if (options->reference.empty()) options->reference = model.reference_path;
-    if (options->reference.empty()) {
-      throw_usage(options->model.bundle + " holds no reference.safetensors; give --reference FILE");
-    }
-    const TensorFile file = TensorFile::open(options->reference);
-    const ReferenceSource source = [&](const std::string& name) -> std::optional<Tensor> {
-      if (!file.has(name)) return std::nullopt;
-      return file.read(name);
-    };
-    CompareOptions compare_options;
-    compare_options.mode =
-        options->mode == "chained" ? CompareMode::kChained : CompareMode::kIsolated;
-    compare_options.threads = options->model.threads;
-    compare_options.accuracy = options->model.parsed_accuracy();
-    compare_options.reference_kernels = options->model.oracle;
-    Comparison comparison;
-    {
-      Progress progress("comparing layer");
-      compare_options.progress = [&](std::size_t done, std::size_t total) {
-        progress.show(done, total);
-      };
-      try {
-        comparison = compare(model.graph, model.weights, source, compare_options);
-      } catch (const Error& error) {
-        // Shapes that do not fit the graph come from the file here, not from the command line.
-        throw Error(error.kind() == ErrorKind::kUsage ? ErrorKind::kInput : error.kind(),
-                    options->reference + ": " + error.what());
-      }
-    }
-    if (options->json) {
-      print_json(comparison, *options);
-    } else {
-      print_table(comparison, *options);
-    }
-    return comparison.first_departure.empty() ? 0 : 1;
-  };
+  return [options] { return Verifier(*options).run(); };
 }
 
 }  // namespace leadsman::cli

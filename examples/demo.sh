@@ -68,10 +68,10 @@ for model in conv vit; do
     "$(count $model odd 3)"
 done
 
-title "Every layer against what the reference library computed"
+title "The picture's way to the input, and every layer, against the reference libraries"
 for model in conv vit; do
   show_end "$out/verify_$model.txt" 4 \
-    $leadsman verify $bundles/$model --reference $bundles/$model/reference.safetensors
+    $leadsman verify $bundles/$model --image $picture
 done
 
 title "What layers see in one picture: values, a sheet of channels, attention heads"

@@ -1,8 +1,10 @@
 #include "leadsman/picture.h"
 
 #include <algorithm>
+#include <array>
 #include <cerrno>
 #include <cstring>
+#include <fstream>
 #include <limits>
 #include <new>
 #include <utility>
@@ -20,6 +22,7 @@ namespace {
 
 using loaders::PictureSource;
 
+constexpr std::string_view kJpegBegins = "\xff\xd8";
 constexpr std::int64_t kLargestSide = std::int64_t{1} << 24;
 constexpr std::int64_t kLargestBytes = std::numeric_limits<std::int32_t>::max();
 
@@ -74,7 +77,7 @@ std::vector<std::byte> read_bytes(const std::string& path, std::int64_t limit) {
 
 loaders::DecodedPicture decode_any(const PictureSource& source) {
   if (source.bytes.empty()) source.fail("is empty");
-  if (source.starts_with("\xff\xd8")) return loaders::decode_jpeg(source);
+  if (source.starts_with(kJpegBegins)) return loaders::decode_jpeg(source);
   if (source.starts_with("\x89PNG\r\n\x1a\n")) return loaders::decode_png(source);
   if (source.starts_with("BM")) return loaders::decode_bmp(source);
   if (source.size() >= 2 && source.at(0) == 'P' && source.at(1) >= '1' && source.at(1) <= '6') {
@@ -138,6 +141,13 @@ Picture read_picture(const std::filesystem::path& path, Orientation orientation,
     throw Error(ErrorKind::kMemory, name + ": not enough memory to read it");
   }
   return decode_picture(bytes, name, orientation, limits);
+}
+
+bool is_jpeg(const std::filesystem::path& path) {
+  std::array<char, kJpegBegins.size()> begin{};
+  std::ifstream file(path, std::ios::binary);
+  file.read(begin.data(), begin.size());
+  return file && std::string_view(begin.data(), begin.size()) == kJpegBegins;
 }
 
 }  // namespace leadsman

@@ -7,6 +7,7 @@
 
 #include "leadsman/error.h"
 #include "leadsman/runner.h"
+#include "observe/reference.h"
 #include "observe/single_layer.h"
 #include "observe/threshold.h"
 
@@ -16,12 +17,6 @@ namespace {
 // Room for errors that reach a layer correlated, where its gain counts on independent ones (common
 // practice, no source; the margin that is left is measured in tests/observe/compare_test.cc).
 constexpr double kPropagation = 2.0;
-
-Tensor need(const ReferenceSource& reference, const std::string& name) {
-  std::optional<Tensor> tensor = reference(name);
-  if (!tensor) throw_input("the reference holds no tensor '" + name + "'");
-  return *std::move(tensor);
-}
 
 class Comparer {
  public:

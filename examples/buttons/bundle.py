@@ -3,8 +3,8 @@
 
   bundle.py FOLDER     reads FOLDER/conv.pt and FOLDER/vit.pt, writes bundles/conv and bundles/vit
 
-Each bundle carries a reference: one shipped picture and what PyTorch computed for it, layer by
-layer.
+Each bundle carries a reference: one shipped picture, what Pillow made of it on the way to the
+input, and what PyTorch computed for it, layer by layer.
 """
 
 import argparse
@@ -12,11 +12,10 @@ import pathlib
 import sys
 
 import torch
-from PIL import Image
 
 import render
 import train
-from preprocess import PREPROCESS, preprocess
+from preprocess import PREPROCESS
 
 HERE = pathlib.Path(__file__).resolve().parent
 sys.path.insert(0, str(HERE.parents[1] / "loaders" / "torch"))
@@ -28,16 +27,15 @@ def main():
     parser.add_argument("folder", type=pathlib.Path, help="where train.py left the state dicts")
     folder = parser.parse_args().folder
     torch.set_num_threads(1)
-    picture = sorted((HERE / "pictures" / "ordinary").iterdir())[0]
-    example = preprocess(Image.open(picture)).unsqueeze(0)
     for name in train.RECIPES:
         summary = leadsman_export.export(
             train.load(name, folder),
-            example,
+            None,
             HERE / "bundles" / name,
             labels=render.CLASS_NAMES,
             preprocess=PREPROCESS,
             name=f"buttons-{name}",
+            picture=HERE / "pictures" / "odd" / "walnut_shield_14.jpg",
         )
         print(f"bundles/{name}: {summary['layers']} layers, {summary['parameters']:,} values")
 

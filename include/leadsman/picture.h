@@ -72,6 +72,10 @@ Picture decode_picture(std::span<const std::byte> bytes, std::string_view name,
                        Orientation orientation = Orientation::kAsStored,
                        const PictureLimits& limits = {});
 
+/// Whether the file begins as JPEG does, the one kind whose decoders may differ. False when it
+/// cannot be read.
+bool is_jpeg(const std::filesystem::path& path);
+
 /// Writes an 8-bit RGB PNG; `path` holds either its old contents or the whole picture at any time.
 /// Throws Error(kInput) naming the path when it cannot be written, Error(kUsage) when the picture
 /// is empty, its bytes do not fit its sizes or it is above 2^30 bytes.

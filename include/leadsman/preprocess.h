@@ -74,12 +74,13 @@ PictureSize output_size(const Preprocess& preprocess, const PictureSize& picture
 /// empty, or so extreme in its proportions that resizing needs more than 1 GiB.
 Tensor preprocess(const Picture& picture, const Preprocess& preprocess);
 
-/// What stands between the steps. `normalised` equals preprocess(), bit for bit.
+/// What stands between the steps; leadsman/compare_picture.h compares it with another library's.
 struct PreprocessStages {
-  Picture resized;
-  Picture cropped;
-  Tensor normalised;
+  Picture resized;    ///< as it came when there is no resize
+  Picture cropped;    ///< `resized` when there is no crop
+  Tensor normalised;  ///< equals preprocess(), bit for bit
 };
+/// Resizes all of the picture, also what the crop then drops. Throws as preprocess().
 PreprocessStages preprocess_stages(const Picture& picture, const Preprocess& preprocess);
 
 /// The steps by themselves.

@@ -7,7 +7,7 @@
     python3 leadsman_export.py --torchvision resnet18 --checkpoint resnet18.pth --out resnet18
 
 The bundle's format is described in loaders/GRAPH_FORMAT.md. This file needs torch (1.13 or later)
-and numpy; torchvision only for its command line.
+and numpy; torchvision only for its command line, Pillow only for a picture as the example.
 
 How it works, in the order of this file:
   1. errors, and files written whole or not at all;
@@ -16,7 +16,8 @@ How it works, in the order of this file:
   3. nodes become layers: a handler for each module type, function or method (tables at "Handlers").
      A tensor between layers is a `Wire`; reshape, permute and the like only change how the next
      operation sees it (`View`), until the axes spell a form that an operator produces (`FORMS`);
-  4. `export`, helpers that give untrained models weights worth comparing, the command line.
+  4. `export`, helpers that give untrained models weights worth comparing, what a picture becomes
+     as the example, the command line.
 
 Adding support for a module or function is adding one handler: a Python function whose parameters
 are those of the torch function it stands for, after `site`, the place in the user's model.
@@ -104,6 +105,7 @@ _SAFETENSORS_DTYPES = {
     torch.float32: "F32",
     torch.float16: "F16",
     torch.bfloat16: "BF16",
+    torch.uint8: "U8",  # pictures alone
 }
 
 
@@ -843,7 +845,7 @@ class Builder:
     def weight_name(self, site, layer_name, role, constant):
         """The checkpoint's name of a tensor; one computed from the checkpoint gets a new name."""
         tensor = constant.tensor
-        if tensor.dtype not in _SAFETENSORS_DTYPES:
+        if not (tensor.is_floating_point() and tensor.dtype in _SAFETENSORS_DTYPES):
             site.fail(f"a weight of type {tensor.dtype}", "use floating-point weights")
         name = self.checkpoint_names.get(id(tensor))
         for source in () if name else constant.sources:
@@ -2580,21 +2582,38 @@ def _patch_merging(site, input):
 # Export
 
 
-def export(module, example_input, folder, labels=None, preprocess=None, reference=True, name=None):
+def export(
+    module,
+    example_input,
+    folder,
+    labels=None,
+    preprocess=None,
+    reference=True,
+    name=None,
+    picture=None,
+):
     """Writes `module` as a bundle into `folder` (made if it is not there).
 
     module          any nn.Module; it is run in eval mode and left as it was
     example_input   a tensor [N, C, H, W] (or [N, T, C], [N, C]), or a tuple of several, for the
-                    first parameters of forward; others keep their defaults
+                    first parameters of forward; others keep their defaults. None with a picture
     labels          optional class names, written to labels.txt
     preprocess      optional dict, see GRAPH_FORMAT.md
     reference       whether to write every layer's output for the example
     name            the graph's name; the folder's when None
+    picture         optional path (needs Pillow): the example is what `preprocess` makes of this
+                    picture, and the reference holds the stages of that, so that
+                    `leadsman verify --image` compares the whole way from the file
 
     Returns {"layers": count, "parameters": count, "unused": names of the checkpoint's tensors that
     the graph does not need, "computed": names of weights computed from the checkpoint's}. Raises
     ExportError for what cannot be exported; nothing is written then.
     """
+    stages, made_by = {}, {}
+    if picture is not None:
+        if example_input is not None or preprocess is None:
+            raise ValueError("a picture goes with preprocess, and takes the place of example_input")
+        example_input, stages, made_by = _preprocessed(picture, preprocess)
     inputs = tuple(example_input) if isinstance(example_input, (tuple, list)) else (example_input,)
     with torch.no_grad(), _in_eval_mode(module):
         expected = _tensors_of(module(*(tensor.clone() for tensor in inputs)))
@@ -2622,8 +2641,8 @@ def export(module, example_input, folder, labels=None, preprocess=None, referenc
     _write_text(os.path.join(folder, "graph.json"), graph_text)
     if reference:
         tensors = {name: tensor.float() for name, tensor in builder.reference.items()}
-        metadata = {"library": "torch", "version": str(torch.__version__)}
-        write_safetensors(stale, tensors, metadata)
+        metadata = {"library": "torch", "version": str(torch.__version__), **made_by}
+        write_safetensors(stale, {**tensors, **stages}, metadata)
     buffers = {name for name, _ in module.named_buffers()}
     return {
         "layers": len(builder.layers),
@@ -2793,6 +2812,73 @@ def picture_like(count, height, width, channels=3, seed=0):
 
 
 # ---------------------------------------------------------------------------------------------
+# A picture as the example
+
+
+def _preprocessed(path, preprocess):
+    """(input [1, C, h, w], {"preprocess:decoded": levels [1, 3, h, w], ...}, metadata)
+
+    The steps are Pillow's, the sizes and the order of operations those of torchvision's Resize,
+    CenterCrop, ToTensor and Normalize.
+    """
+    try:
+        import PIL
+        from PIL import Image, ImageOps
+    except ImportError as error:
+        raise ImportError("to read a picture, the exporter needs the package Pillow") from error
+
+    with Image.open(path) as file:
+        image = file if preprocess.get("orientation") != "exif" else ImageOps.exif_transpose(file)
+        image = image.convert("RGB")
+    stages = {"decoded": image}
+    if "resize" in preprocess:
+        kernel = preprocess["resize"].get("interpolation", "bilinear")
+        if kernel not in ("nearest", "bilinear", "bicubic"):
+            raise ValueError(f"the interpolation {kernel!r} is not nearest, bilinear or bicubic")
+        height, width = _resized_size(preprocess["resize"], image.height, image.width)
+        image = image.resize((width, height), getattr(Image, kernel.upper()))
+    stages["resized"] = image
+    if "crop" in preprocess:
+        height, width = preprocess["crop"]
+        top, left = _crop_begin(image.height, height), _crop_begin(image.width, width)
+        image = image.crop((left, top, left + width, top + height))  # black beyond the picture
+    stages["cropped"] = image
+
+    channels = preprocess.get("channels", "RGB")
+    levels = _levels(image.convert("L") if channels == "GREY" else image)
+    levels = levels.flip(1) if channels == "BGR" else levels
+    count = levels.shape[1]
+    mean, std = (
+        torch.tensor(preprocess.get(key, [default] * count), dtype=torch.float).view(1, count, 1, 1)
+        for key, default in (("mean", 0.0), ("std", 1.0))
+    )
+    example = ((levels.double() * preprocess.get("scale", 1 / 255)).float() - mean) / std
+    return (
+        example,
+        {f"preprocess:{stage}": _levels(image) for stage, image in stages.items()},
+        {"picture": os.path.basename(path), "pillow": PIL.__version__},
+    )
+
+
+def _resized_size(resize, height, width):
+    if "exact" in resize:
+        return resize["exact"]
+    side = resize["shorter_side"]
+    longer = int(side * max(height, width) / min(height, width))
+    return (side, longer) if height <= width else (longer, side)
+
+
+def _crop_begin(size, crop):
+    return round((size - crop) / 2) if crop <= size else -((crop - size) // 2)
+
+
+def _levels(image):
+    """The bytes of a picture as [1, channels, height, width]."""
+    levels = torch.frombuffer(bytearray(image.tobytes()), dtype=torch.uint8)
+    return levels.view(1, image.height, image.width, -1).permute(0, 3, 1, 2).contiguous()
+
+
+# ---------------------------------------------------------------------------------------------
 # Command line: models of torchvision
 
 
@@ -2869,6 +2955,7 @@ def main(arguments=None):
     parser.add_argument("--checkpoint", metavar="FILE", help="its weights; seeded ones without")
     parser.add_argument("--seed", metavar="N", type=int, default=0, help="of weights and example")
     parser.add_argument("--size", metavar="HxW", help="of the example (default: the model's)")
+    parser.add_argument("--picture", metavar="FILE", help="the example (default: a seeded one)")
     parser.add_argument("--labels", metavar="FILE", help="class names (default: torchvision's)")
     parser.add_argument("--out", metavar="DIR", required=True, help="the bundle's folder")
     options = parser.parse_args(arguments)
@@ -2900,7 +2987,9 @@ def main(arguments=None):
         module, preprocess = torchvision_model(name, size, len(labels), options.seed)
     except ValueError as error:
         parser.error(str(error))
-    example = picture_like(1, *preprocess["crop"], seed=options.seed + 1)
+    example = None
+    if not options.picture:
+        example = picture_like(1, *preprocess["crop"], seed=options.seed + 1)
     if options.checkpoint:
         try:
             _load_checkpoint(module, options.checkpoint)
@@ -2912,7 +3001,9 @@ def main(arguments=None):
     else:
         settle(module, preprocess["crop"], options.seed)
     try:
-        summary = export(module, example, options.out, labels, preprocess, name=name)
+        summary = export(
+            module, example, options.out, labels, preprocess, name=name, picture=options.picture
+        )
     except (ExportError, OSError) as error:
         return _failed(error)
     print(f"{options.out}: {summary['layers']} layers, {summary['parameters']:,} parameters")

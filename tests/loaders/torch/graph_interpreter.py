@@ -12,7 +12,7 @@ import numpy
 import torch
 import torch.nn.functional as F
 
-_DTYPES = {"F64": "<f8", "F32": "<f4", "F16": "<f2", "BF16": "<u2"}
+_DTYPES = {"F64": "<f8", "F32": "<f4", "F16": "<f2", "BF16": "<u2", "U8": "u1"}
 
 
 def read_safetensors(path):
