@@ -847,7 +847,7 @@ class Builder:
         tensor = constant.tensor
         if not (tensor.is_floating_point() and tensor.dtype in _SAFETENSORS_DTYPES):
             site.fail(f"a weight of type {tensor.dtype}", "use floating-point weights")
-        name = self.checkpoint_names.get(id(tensor))
+        name = self.checkpoint_names.get(id(tensor)) or self.cut.get(id(tensor), (None,))[0]
         for source in () if name else constant.sources:
             original = self.checkpoint.get(source)
             if original is not None and torch.equal(original.detach(), tensor.detach()):
@@ -862,8 +862,9 @@ class Builder:
             name = f"{layer_name}.{role}"
             while name in self.checkpoint or name in self.weights:
                 name += "_"
+            self.cut[id(tensor)] = (name, tensor)  # another layer may use it, too
             tensor = tensor.detach().clone()
-        self.weights[name] = tensor
+        self.weights.setdefault(name, tensor)
         return name
 
     def add_layer(self, site, name, operator_name, inputs, attributes, weights, wire):
