@@ -145,7 +145,7 @@ def self_test():
         "loaders/d.cc": '#include "leadsman/compare.h"\n',
         "loaders/d2.cc": '#include "observe/threshold.h"\n',
         "observe/e.cc": '#include "ops/operator.h"\n',
-        "observe/e2.cc": '#include "leadsman/preprocess.h"\n',
+        "observe/e2.cc": '#include "leadsman/bundle.h"\n',
         "observe/e3.cc": '#include "engine/plan_state.h"\n',
         "cli/f.cc": '#include "core/threads.h"\n',
         "examples/embed/g.cc": '#include "engine/plan_state.h"\n',
