@@ -83,6 +83,14 @@ HWY_INLINE V exponential(D d, V x) {
   return hn::Mul(hn::Mul(fraction, power_of_two(d, half)), power_of_two(d, hn::Sub(e.whole, half)));
 }
 
+// The same in one factor, with e^-86 for all that is less: enough where 1 is added to it.
+template <class D, class V = hn::Vec<D>>
+HWY_INLINE V exponential_above(D d, V x) {
+  const auto e =
+      reduce_exponential(d, at_most(d, at_least(d, x, hn::Set(d, -86.0F)), hn::Set(d, 89.0F)));
+  return hn::Mul(hn::Add(e.beyond_one, hn::Set(d, 1.0F)), power_of_two(d, e.whole));
+}
+
 // For x <= 0, with 0 below e^-86: what a softmax needs. Subnormals are slow on many processors.
 template <class D, class V = hn::Vec<D>>
 HWY_INLINE V exponential_of_negative(D d, V x) {
@@ -106,7 +114,7 @@ HWY_INLINE V exponential_less_one(D d, V x) {
 template <class D, class V = hn::Vec<D>>
 HWY_INLINE V softplus(D d, V x) {
   const V two = hn::Set(d, 2.0F);
-  const V u = exponential(d, hn::Neg(hn::Abs(x)));
+  const V u = exponential_above(d, hn::Neg(hn::Abs(x)));
   const V s = hn::Div(u, hn::Add(u, two));
   const V z = hn::Mul(s, s);
   V p = hn::Set(d, 1.0F / 15.0F);
@@ -132,7 +140,7 @@ HWY_INLINE V mish(D d, V x) {
 template <class D, class V = hn::Vec<D>>
 HWY_INLINE V sigmoid(D d, V x) {
   const V one = hn::Set(d, 1.0F);
-  return hn::Div(one, hn::Add(one, exponential(d, hn::Neg(x))));
+  return hn::Div(one, hn::Add(one, exponential_above(d, hn::Neg(x))));
 }
 
 // Near 0 the odd polynomial of the Cephes library's tanhf (Moshier), else 1 - 2 / (e^2x + 1).
@@ -147,7 +155,7 @@ HWY_INLINE V hyperbolic_tangent(D d, V x) {
   p = hn::MulAdd(p, z, hn::Set(d, -3.33332819422e-1F));
   const V near = hn::MulAdd(hn::Mul(p, z), x, x);
   const V one = hn::Set(d, 1.0F);
-  const V e = exponential(d, hn::Add(size, size));
+  const V e = exponential_above(d, hn::Add(size, size));
   const V far = hn::Sub(one, hn::Div(hn::Set(d, 2.0F), hn::Add(e, one)));
   return hn::IfThenElse(hn::Lt(size, hn::Set(d, 0.625F)), near, hn::CopySign(far, x));
 }
@@ -159,7 +167,7 @@ template <class D, class V = hn::Vec<D>>
 HWY_INLINE V normal_tail(D d, V t) {
   t = at_most(d, t, hn::Set(d, 20.0F));
   const V square = hn::Mul(t, t);
-  V e = exponential(d, hn::Mul(hn::Set(d, -0.5F), square));
+  V e = exponential_of_negative(d, hn::Mul(hn::Set(d, -0.5F), square));
 #if HWY_NATIVE_FMA
   // What rounding took from t^2 matters in the exponent.
   const V lost = hn::MulSub(t, t, square);
@@ -191,7 +199,7 @@ template <class D, class V = hn::Vec<D>>
 HWY_INLINE V gelu_tanh(D d, V x) {
   // 1 + tanh(u) = 2 sigmoid(2u).
   const V cubic = hn::MulAdd(hn::Mul(hn::Set(d, 0.0713548163F), x), x, hn::Set(d, 1.59576912F));
-  const V e = exponential(d, hn::Neg(hn::Mul(x, cubic)));
+  const V e = exponential_above(d, hn::Neg(hn::Mul(x, cubic)));
   return hn::Div(x, hn::Add(hn::Set(d, 1.0F), e));
 }
 
@@ -214,7 +222,7 @@ HWY_INLINE V activate_vector(D d, V x, [[maybe_unused]] V parameter) {
   } else if constexpr (kKind == ActivationKind::kGeluTanh) {
     return gelu_tanh(d, x);
   } else if constexpr (kKind == ActivationKind::kSilu) {
-    return hn::Div(x, hn::Add(hn::Set(d, 1.0F), exponential(d, hn::Neg(x))));
+    return hn::Div(x, hn::Add(hn::Set(d, 1.0F), exponential_above(d, hn::Neg(x))));
   } else if constexpr (kKind == ActivationKind::kSigmoid) {
     return sigmoid(d, x);
   } else if constexpr (kKind == ActivationKind::kHardSigmoid) {
@@ -231,7 +239,7 @@ HWY_INLINE V activate_vector(D d, V x, [[maybe_unused]] V parameter) {
   } else if constexpr (kKind == ActivationKind::kMish) {
     return mish(d, x);
   } else if constexpr (kKind == ActivationKind::kQuickGelu) {
-    const V e = exponential(d, hn::Mul(x, hn::Set(d, -1.702F)));
+    const V e = exponential_above(d, hn::Mul(x, hn::Set(d, -1.702F)));
     return hn::Div(x, hn::Add(hn::Set(d, 1.0F), e));
   } else {
     return x;

@@ -24,6 +24,7 @@
 #define HWY_TARGET_INCLUDE "ops/simd/matrix.cc"
 #include "hwy/foreach_target.h"
 #include "hwy/highway.h"
+#include "ops/simd/activation-inl.h"
 #include "ops/simd/math-inl.h"
 
 HWY_BEFORE_NAMESPACE();
@@ -187,6 +188,7 @@ constexpr auto kTiles = all_tiles(std::make_integer_sequence<int, kMaxRows>());
 void matrix_product(const MatrixCall& call) {
   if (call.rows == 0 || call.cols == 0) return;
   const auto bounds = activation_bounds(call.activation);
+  const ActivateBlock activate = bounds ? nullptr : block_activation(call.activation.kind);
   constexpr float kInfinity = std::numeric_limits<float>::infinity();
   const std::int64_t depth = call.taps * call.depth;
   const std::int64_t panel_stride = depth * kPanel;
@@ -249,12 +251,9 @@ void matrix_product(const MatrixCall& call) {
       tile.prefetch = reinterpret_cast<const char*>(ahead) +
                       i * call.taps * (call.depth / kUnroll) * tile.prefetch_step;
       kTiles[rows - 1][static_cast<std::size_t>(shift)](tile);
-      if (!bounds) {
-        const std::int64_t count = std::min(tile.cols, width * kLanes);
-        for (std::size_t r = 0; r < rows; ++r) {
-          float* c = tile.c + static_cast<std::int64_t>(r) * call.c_stride;
-          activate_row(call.activation, c, c, count);
-        }
+      if (activate != nullptr) {
+        activate({tile.c, call.c_stride, tile.c, call.c_stride, static_cast<std::int64_t>(rows),
+                  std::min(tile.cols, width * kLanes), call.activation.parameter});
       }
     }
   }

@@ -11,6 +11,7 @@
 #define HWY_TARGET_INCLUDE "ops/simd/winograd.cc"
 #include "hwy/foreach_target.h"
 #include "hwy/highway.h"
+#include "ops/simd/activation-inl.h"
 #include "ops/simd/math-inl.h"
 
 #ifndef LEADSMAN_UNROLL
@@ -149,10 +150,9 @@ void output_tile(const WinogradOutput& call) {
   }
   if (bounds) return;
   for (std::int64_t i = 0; i < call.rows; ++i) {
-    for (std::int64_t j = 0; j < call.cols; ++j) {
-      float* pixel = call.out + i * call.row_stride + j * call.stride;
-      activate_row(call.activation, pixel, pixel, call.channels);
-    }
+    float* row = call.out + i * call.row_stride;
+    block_activation(call.activation.kind)(
+        {row, call.stride, row, call.stride, call.cols, call.channels, call.activation.parameter});
   }
 }
 
