@@ -189,6 +189,11 @@ void add_all() {
   add_conv(112, 96, 96, 3, 2, 1, 96);
   add_conv(14, 576, 576, 3, 2, 1, 576);
   for (const auto& [size, channels] :
+       {std::pair<std::int64_t, std::int64_t>{28, 120}, {14, 480}, {7, 1152}}) {
+    add_conv(size, channels, channels, 5, 1, 2, channels);
+  }
+  add_conv(56, 144, 144, 5, 2, 2, 144);
+  for (const auto& [size, channels] :
        {std::pair<std::int64_t, std::int64_t>{56, 96}, {28, 192}, {14, 384}, {7, 768}}) {
     add_conv(size, channels, channels, 7, 1, 3, channels);
   }

@@ -65,9 +65,9 @@ class Conv2d final : public Operator {
   }
 
   std::span<const Strategy* const> strategies() const override {
-    static const std::array<const Strategy*, 5> all{&conv2d_winograd4(), &conv2d_winograd2(),
-                                                    &conv2d_depthwise(), &conv2d_implicit(),
-                                                    &conv2d_reference()};
+    static const std::array<const Strategy*, 6> all{&conv2d_winograd4(),  &conv2d_winograd2(),
+                                                    &conv2d_depthwise3(), &conv2d_depthwise(),
+                                                    &conv2d_implicit(),   &conv2d_reference()};
     return all;
   }
 

@@ -30,10 +30,11 @@ struct Conv2dGeometry {
 
 const Operator& conv2d_operator();
 
-const Strategy& conv2d_winograd2();  ///< "winograd2": 3x3 by minimal filtering, tiles of 2x2
-const Strategy& conv2d_winograd4();  ///< "winograd4": the same in tiles of 4x4
-const Strategy& conv2d_depthwise();  ///< "depthwise": one input channel a group
-const Strategy& conv2d_implicit();   ///< "implicit": a matrix product, any shape
-const Strategy& conv2d_reference();  ///< "reference": plain loops in double
+const Strategy& conv2d_winograd2();   ///< "winograd2": 3x3 by minimal filtering, tiles of 2x2
+const Strategy& conv2d_winograd4();   ///< "winograd4": the same in tiles of 4x4
+const Strategy& conv2d_depthwise3();  ///< "depthwise3": one filter a channel, 3x3, stride 1 or 2
+const Strategy& conv2d_depthwise();   ///< "depthwise": one input channel a group
+const Strategy& conv2d_implicit();    ///< "implicit": a matrix product, any shape
+const Strategy& conv2d_reference();   ///< "reference": plain loops in double
 
 }  // namespace leadsman::ops

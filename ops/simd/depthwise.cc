@@ -41,8 +41,9 @@ HWY_INLINE void finish(D d, const DepthwiseRow& row, V sum, std::int64_t pixel,
 }
 
 // Some neighbouring output pixels: `count` of them from `pixel`, whose windows begin at column x.
+// The row is a copy: stores of floats cannot change it.
 struct Tile {
-  const DepthwiseRow& row;
+  DepthwiseRow row;
   std::int64_t pixel;
   std::int64_t count;
   std::int64_t x;
@@ -123,7 +124,8 @@ HWY_INLINE void channel_block(const Tile& tile, std::int64_t channel) {
 }
 
 template <bool kInside, int kWidth, int kStride, int kPixels, int kVectors>
-HWY_INLINE void special_tile(const Tile& tile) {
+HWY_INLINE void special_tile(const Tile& given) {
+  const Tile tile = given;
   constexpr auto kLanes = static_cast<std::int64_t>(hn::MaxLanes(hn::ScalableTag<float>()));
   const std::int64_t channels = tile.row.channels;
   std::int64_t c = 0;
@@ -205,8 +207,6 @@ void depthwise_row(const DepthwiseRow& row) {
   if (row.channels >= kLanes && row.dilation == 1) {
     const std::int64_t window =
         row.kernel_w < 10 && row.stride < 10 ? row.kernel_w * 10 + row.stride : 0;
-    if (window == 31) return special_row<3, 1>(row);
-    if (window == 32) return special_row<3, 2>(row);
     if (window == 51) return special_row<5, 1>(row);
     if (window == 52) return special_row<5, 2>(row);
     if (window == 71) return special_row<7, 1>(row);

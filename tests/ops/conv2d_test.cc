@@ -131,6 +131,45 @@ TEST(Conv2dDepthwise, AgreesWithTheReferenceOnUsualShapes) {
   }
 }
 
+TEST(Conv2dDepthwise3, AgreesWithTheReferenceOnRandomShapes) {
+  constexpr std::array<std::int64_t, 8> kChannels = {16, 17, 24, 31, 40, 100, 176, 330};
+  Random random(31);
+  for (int i = 0; i < 80; ++i) {
+    Geometry g{.n = random.integer(1, 2), .c = random.pick(kChannels), .kernel = {3, 3}};
+    g.groups = g.out_c = g.c;
+    const std::int64_t stride = random.integer(1, 2);
+    g.stride = {stride, stride};
+    g.h = random.integer(3, 24);
+    g.w = random.integer(3, 24);
+    for (auto& side : g.padding) side = random.coin() ? 1 : random.integer(0, 3);
+    OpCase c = conv_case(random, g, random.coin());
+    add_random_epilogue(random, c);
+    if (!refusal(c, "depthwise3").empty()) continue;
+    SCOPED_TRACE(describe(c));
+    check_fast_strategy(c, "depthwise3");
+    if (HasFailure()) return;
+  }
+}
+
+TEST(Conv2dDepthwise3, RefusesOtherWindows) {
+  Random random(32);
+  const Geometry good{.c = 32, .h = 9, .w = 9, .out_c = 32, .kernel = {3, 3}, .groups = 32};
+  const auto refused = [&](auto change) {
+    Geometry g = good;
+    change(g);
+    return !refusal(conv_case(random, g, false), "depthwise3").empty();
+  };
+  EXPECT_FALSE(refused([](Geometry&) {}));
+  EXPECT_TRUE(refused([](Geometry& g) { g.kernel = {3, 5}; }));
+  EXPECT_TRUE(refused([](Geometry& g) { g.stride = {1, 2}; }));
+  EXPECT_TRUE(refused([](Geometry& g) { g.stride = {3, 3}; }));
+  EXPECT_TRUE(refused([](Geometry& g) { g.dilation = {2, 2}; }));
+  EXPECT_TRUE(refused([](Geometry& g) { g.groups = 16; }));
+  EXPECT_TRUE(refused([](Geometry& g) { g.out_c = 64; }));
+  EXPECT_TRUE(refused([](Geometry& g) { g.c = g.groups = g.out_c = 8; }));
+  EXPECT_TRUE(refused([](Geometry& g) { g.w = 7; }));  // 5 wide: no sum of threes and fours
+}
+
 TEST(Conv2dDepthwise, RefusesWhatIsNotDepthwise) {
   Random random(30);
   EXPECT_NE(refusal(conv_case(random, {.c = 4, .out_c = 4, .groups = 2}, false), "depthwise"), "");
