@@ -32,6 +32,7 @@ while [ $# -gt 0 ]; do
 done
 
 jobs=$(nproc)
+case $suites in *asan*) needs_tests="$needs_tests clang-14 libclang-rt-14-dev" ;; esac
 # shellcheck disable=SC2086  # lists of words
 need_packages $needs_build $needs_tests
 
