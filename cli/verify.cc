@@ -213,7 +213,10 @@ Command add_verify(CLI::App& app) {
                    "isolated: each layer gets the reference's inputs; chained: ours flow on")
       ->check(CLI::IsMember({"isolated", "chained"}));
   command->add_flag("--json", options->json, "One JSON object");
-  command->footer("Example: leadsman verify examples/buttons/bundles/conv --mode chained");
+  command->footer(
+      "Example: leadsman verify examples/buttons/bundles/conv --mode chained\n"
+      "         leadsman verify examples/buttons/bundles/vit \\\n"
+      "             --image examples/buttons/pictures/odd/walnut_shield_14.jpg");
   return [options] { return Verifier(*options).run(); };
 }
 

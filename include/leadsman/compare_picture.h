@@ -16,10 +16,10 @@
 
 namespace leadsman {
 
-/// What decoders of JPEG may differ by: each rounds the inverse transform and the conversion from
-/// YCbCr in its own way. (libjpeg-turbo's floating-point transform comes to 3 levels against its
-/// accurate integer one in one value of ten thousand, and then counts as a departure.)
-inline constexpr int kJpegDecoderLevels = 2;
+/// What decoders of JPEG may differ by. Inverse transforms that round in their own ways differ by
+/// one level in Y, Cb and Cr, and blue is Y + 1.772 Cb (ITU-T T.871): 2.772 levels, 3 once rounded.
+/// libjpeg-turbo's floating-point transform and its accurate integer one do come to 3.
+inline constexpr int kJpegDecoderLevels = 3;
 
 /// Levels are steps of an 8-bit picture; a normalised value is taken back to them by std / scale.
 struct LevelDifference {
