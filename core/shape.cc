@@ -57,9 +57,13 @@ std::string Shape::to_string() const {
   return text + "]";
 }
 
-std::int64_t channel_count(const Shape& shape) {
+int channel_axis(const Shape& shape) {
   assert(shape.rank() >= 2 && shape.rank() <= 4);
-  return shape.rank() == 3 ? shape[2] : shape[1];
+  return shape.rank() == 3 ? 2 : 1;
+}
+
+std::int64_t channel_count(const Shape& shape) {
+  return shape[channel_axis(shape)];
 }
 
 std::int64_t position_count(const Shape& shape) {

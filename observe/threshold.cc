@@ -219,6 +219,7 @@ Gain gain_of(const std::string& op) {
       {"avg_pool", mean_gain},
       {"adaptive_avg_pool", mean_gain},
       {"mean", mean_gain},
+      {"channel_pool", mean_gain},
       {"add", sum_gain},
       {"position_embed", shrink_gain},
       {"attention", attention_gain},

@@ -10,6 +10,7 @@
 #include "ops/attention_weights/attention_weights.h"
 #include "ops/avg_pool/avg_pool.h"
 #include "ops/batch_norm/batch_norm.h"
+#include "ops/channel_pool/channel_pool.h"
 #include "ops/channel_shuffle/channel_shuffle.h"
 #include "ops/class_token/class_token.h"
 #include "ops/concat/concat.h"
@@ -51,6 +52,7 @@ std::span<const Operator* const> all_operators() {
       &attention_weights_operator(),
       &avg_pool_operator(),
       &batch_norm_operator(),
+      &channel_pool_operator(),
       &channel_shuffle_operator(),
       &class_token_operator(),
       &concat_operator(),

@@ -46,7 +46,10 @@ class Shape {
   std::int64_t elements_ = 1;
 };
 
-/// Channels of an activation: axis 1 of images and features, the last axis of tokens.
+/// Where the channels of an activation are: axis 1 of images and features, the last axis of tokens.
+/// Requires rank 2, 3 or 4.
+int channel_axis(const Shape& shape);
+/// How many channels there are: the size of channel_axis().
 /// Requires rank 2, 3 or 4.
 std::int64_t channel_count(const Shape& shape);
 /// Positions of an activation, each holding channel_count() neighbouring floats in memory:

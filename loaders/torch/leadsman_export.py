@@ -1570,12 +1570,11 @@ def _mul(site, input, other):
 
 
 def _is_factor(view, factor):
-    """Whether `factor` has one value for each channel of a picture, or for each position."""
-    n, *rest = view.wire.tensor.shape
-    shape = list(factor.wire.tensor.shape)
-    if view.wire.sizes == "NCHW":
-        return shape in ([n, rest[0], 1, 1], [n, 1, *rest[1:]])
-    return view.wire.sizes == "NTC" and shape == [n, 1, rest[1]]
+    """Whether `factor` has one value for each channel, or for each position."""
+    shape, channels = list(view.wire.tensor.shape), view.wire.sizes.index("C")
+    each_channel = [size if axis in (0, channels) else 1 for axis, size in enumerate(shape)]
+    each_position = [1 if axis == channels else size for axis, size in enumerate(shape)]
+    return list(factor.wire.tensor.shape) in (each_channel, each_position)
 
 
 @handles(operator.truediv, operator.itruediv, torch.div, torch.true_divide, "div", "div_")
@@ -1767,14 +1766,38 @@ def _over_positions(site, view, dim):
     if reduced != set(view.wire.sizes) - set("NC") or left != ["N", "C"] or not reduced:
         site.fail(
             f"{site.short_name()} over the axes {sorted(dims)} of {site.shown(view)}",
-            "reduce over all positions: axes 2 and 3 of an image, axis 1 of tokens",
+            "reduce over all positions (axes 2 and 3 of an image, axis 1 of tokens), or over the "
+            "channels alone with keepdim=True",
         )
     return reduced
+
+
+def _over_channels(site, view, dim, keepdim, kind):
+    """The layer of a reduction over the channels alone; None when it is another."""
+    dims = [view.axis(d) for d in ([dim] if isinstance(dim, int) else dim or ())]
+    if view.wire.sizes == "NC" or [view.axes[d] for d in dims] != ["C"]:
+        return None
+    result = site.result
+    if isinstance(site.value, tuple):  # values and indices
+        result = site.value[0].detach().clone()
+    if keepdim:
+        factors = view.factors
+    else:  # one channel beside another axis, where unsqueeze finds it
+        factors = [list(axis) for axis in view.factors]
+        (channel,) = factors.pop(dims[0])
+        factors[dims[0] % len(factors)].insert(0, channel)
+    return site.layer(
+        "channel_pool", [view], {"kind": kind}, short=kind, size_of={"C": 1}, result=result,
+        factors=tuple(map(tuple, factors)),
+    )  # fmt: skip
 
 
 @handles(torch.mean, "mean")
 def _mean(site, input, dim=None, keepdim=False, *, dtype=None):
     view = site.settled(input)
+    pooled = _over_channels(site, view, dim, keepdim, "mean")
+    if pooled:
+        return pooled
     averaged = _over_positions(site, view, dim)
     if not keepdim:
         return site.layer("mean", [view], {"keep": False}, sizes="NC", short="mean")
@@ -1784,9 +1807,22 @@ def _mean(site, input, dim=None, keepdim=False, *, dtype=None):
     )
 
 
+@handles(torch.max, "max")
+def _max(site, input, dim=None, keepdim=False):
+    """Values and indices along one axis; of all values, or of two tensors, is another function."""
+    if not isinstance(dim, int):
+        site.fail(f"{site.operation} without an axis", "name the axis: max(dim), or use amax")
+    where = Refused("the places of the largest values are used", "use the values alone: amax(dim)")
+    return _amax(site, input, dim, keepdim), where
+
+
 @handles(torch.amax, "amax")
 def _amax(site, input, dim=(), keepdim=False):
-    view = site.plain(input, "NCHW")
+    view = site.settled(input)
+    pooled = _over_channels(site, view, dim, keepdim, "max")
+    if pooled:
+        return pooled
+    view = site.plain(view, "NCHW")
     _over_positions(site, view, dim)
     tensor = view.wire.tensor.amax((2, 3), keepdim=True)
     pooled = site.layer(
@@ -1921,7 +1957,19 @@ def _squeeze(site, input, dim=None):
 def _unsqueeze(site, input, dim):
     view = site.view(input)
     place = dim % (len(view.axes) + 1)
-    return site.see(view, (*view.factors[:place], (), *view.factors[place:]))
+    channel = _one_channel(view)  # reduced over, and now given its axis again
+    factors = [tuple(f for f in axis if f is not channel) for axis in view.factors]
+    factors.insert(place, (channel,) if channel else ())
+    return site.see(view, factors)
+
+
+def _one_channel(view):
+    """The only channel of a view, where it shares another's axis."""
+    for axis in view.factors:
+        for f in axis if len(axis) > 1 else ():
+            if f.letter == "C" and view.wire.size_of()["C"] == 1:
+                return f
+    return None
 
 
 @handles(operator.getitem)

@@ -53,7 +53,7 @@ class Concat final : public Operator {
   Shape output_shape(const OpContext& context) const override {
     const Shape& first = context.inputs[0];
     require_rank("input 1", first, {2, 3, 4});
-    const int axis = first.rank() == 3 ? 2 : 1;
+    const int axis = channel_axis(first);
     std::int64_t channels = channel_count(first);
     for (std::size_t i = 1; i < context.inputs.size(); ++i) {
       const Shape& input = context.inputs[i];

@@ -28,7 +28,7 @@ class Linear final : public Operator {
     if (const Tensor* bias = context.weight("bias")) {
       require_shape("bias", bias->shape(), {weight[0]});
     }
-    return input.with(input.rank() == 3 ? 2 : 1, weight[0]);
+    return input.with(channel_axis(input), weight[0]);
   }
 
   Cost cost(const OpContext& context) const override {

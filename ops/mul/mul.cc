@@ -1,5 +1,8 @@
 #include "ops/mul/mul.h"
 
+#include <algorithm>
+#include <vector>
+
 #include "leadsman/error.h"
 #include "ops/rows.h"
 #include "ops/strategy_of.h"
@@ -7,14 +10,47 @@
 namespace leadsman::ops {
 namespace {
 
+// One value for each channel of an item; features have one position, so theirs are all values.
+Shape by_channel(const Shape& full) {
+  if (full.rank() == 4) return {full[0], full[1], 1, 1};
+  return full.rank() == 3 ? full.with(1, 1) : full;
+}
+
+// One value for each position.
+Shape by_position(const Shape& full) {
+  return full.with(channel_axis(full), 1);
+}
+
+// The shapes that a second factor may have, each once.
+std::vector<Shape> factor_shapes(const Shape& full) {
+  std::vector<Shape> shapes{full};
+  if (full.rank() < 2 || full.rank() > 4) return shapes;
+  for (const Shape& shape : {by_channel(full), by_position(full)}) {
+    if (std::ranges::find(shapes, shape) == shapes.end()) shapes.push_back(shape);
+  }
+  return shapes;
+}
+
+bool takes(const Shape& full, const Shape& factors) {
+  const std::vector<Shape> shapes = factor_shapes(full);
+  return std::ranges::find(shapes, factors) != shapes.end();
+}
+
 // A float product is the exact one rounded once: no plainer form could differ.
 class ReferenceKernel final : public Kernel {
  public:
-  explicit ReferenceKernel(const OpContext& context)
-      : same_shape_(context.inputs[0] == context.inputs[1]),
-        rows_(same_shape_ ? context.output.elements() : position_count(context.output)),
-        channels_(same_shape_ ? 1 : channel_count(context.output)),
-        rows_in_image_(same_shape_ ? 1 : context.output[2] * context.output[3]) {}
+  explicit ReferenceKernel(const OpContext& context) {
+    const Shape& full = context.inputs[0];
+    const Shape& factors = context.inputs[1];
+    if (full == factors) {
+      rows_ = full.elements();
+      return;
+    }
+    rows_ = position_count(full);
+    channels_ = channel_count(full);
+    repeated_ = factors == by_channel(full) ? Repeated::kOverPositions : Repeated::kOverChannels;
+    rows_in_item_ = rows_ / std::max<std::int64_t>(1, full[0]);
+  }
 
   bool runs_in_place() const override { return true; }
 
@@ -23,29 +59,31 @@ class ReferenceKernel final : public Kernel {
     const float* b = call.inputs[1].data;
     float* y = call.output.data;
     parallel_rows(call.threads, rows_, channels_, [&](std::int64_t begin, std::int64_t end) {
-      if (same_shape_) {
+      if (repeated_ == Repeated::kNot) {
         for (std::int64_t i = begin; i < end; ++i) y[i] = a[i] * b[i];
         return;
       }
       for (std::int64_t row = begin; row < end; ++row) {
-        const float* factor = b + row / rows_in_image_ * channels_;
         const std::int64_t first = row * channels_;
-        for (std::int64_t c = 0; c < channels_; ++c) y[first + c] = a[first + c] * factor[c];
+        if (repeated_ == Repeated::kOverPositions) {
+          const float* factor = b + row / rows_in_item_ * channels_;
+          for (std::int64_t c = 0; c < channels_; ++c) y[first + c] = a[first + c] * factor[c];
+        } else {
+          const float factor = b[row];
+          for (std::int64_t c = 0; c < channels_; ++c) y[first + c] = a[first + c] * factor;
+        }
       }
     });
   }
 
  private:
-  bool same_shape_;
-  std::int64_t rows_;
-  std::int64_t channels_;
-  std::int64_t rows_in_image_;
-};
+  enum class Repeated { kNot, kOverPositions, kOverChannels };
 
-// Whether `factors` holds one value for each channel of `image`.
-bool is_factor_of(const Shape& image, const Shape& factors) {
-  return image.rank() == 4 && factors == Shape{image[0], image[1], 1, 1};
-}
+  Repeated repeated_ = Repeated::kNot;
+  std::int64_t rows_ = 0;
+  std::int64_t channels_ = 1;
+  std::int64_t rows_in_item_ = 1;
+};
 
 class Mul final : public Operator {
  public:
@@ -53,8 +91,8 @@ class Mul final : public Operator {
     static const Contract contract{
         .name = "mul",
         .meaning =
-            "product of two tensors of one shape, or of an image and one factor a channel "
-            "(Hu et al. 2018)",
+            "product of two tensors of one shape, or of one and a factor for each of its channels "
+            "(Hu et al. 2018) or positions (Woo et al. 2018)",
         .min_inputs = 2,
         .max_inputs = 2,
         .attributes = {},
@@ -66,12 +104,12 @@ class Mul final : public Operator {
   Shape output_shape(const OpContext& context) const override {
     const Shape& a = context.inputs[0];
     const Shape& b = context.inputs[1];
-    if (a == b || is_factor_of(a, b)) return a;
+    if (takes(a, b)) return a;
     std::string message = "input 2 has shape " + b.to_string() + ", expected " + a.to_string();
-    if (is_factor_of(b, a)) {
-      message += "; the larger input comes first";
-    } else if (a.rank() == 4) {
-      message += " or " + Shape{a[0], a[1], 1, 1}.to_string();
+    if (takes(b, a)) throw_input(message + "; the larger input comes first");
+    const std::vector<Shape> shapes = factor_shapes(a);
+    for (std::size_t i = 1; i < shapes.size(); ++i) {
+      message += (i + 1 == shapes.size() ? " or " : ", ") + shapes[i].to_string();
     }
     throw_input(message);
   }

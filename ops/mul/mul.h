@@ -1,5 +1,7 @@
-// Products, value by value: y = a * b of one shape, or each channel of an image [N, C, H, W] times
-// its own factor [N, C, 1, 1], as squeeze-and-excitation does (Hu et al. 2018).
+// Products, value by value: y = a * b of one shape, or of a full tensor and factors that are
+// repeated over it: one for each channel of an item ([N, C, 1, 1] of an image, [N, 1, C] of
+// tokens), as squeeze-and-excitation has them (Hu et al. 2018), or one for each position ([N, 1, H,
+// W], [N, T, 1], [N, 1] of features), as spatial attention has them (Woo et al. 2018).
 #pragma once
 
 #include "ops/operator.h"

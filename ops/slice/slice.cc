@@ -78,7 +78,7 @@ class Slice final : public Operator {
     } else {
       require_rank("input", input, {2, 3, 4});
     }
-    const int axis = tokens ? 1 : input.rank() == 3 ? 2 : 1;
+    const int axis = tokens ? 1 : channel_axis(input);
     const std::int64_t start = context.attributes.integer("start");
     const std::int64_t given = context.attributes.integer("count");
     const std::int64_t count = given == 0 ? input[axis] - start : given;

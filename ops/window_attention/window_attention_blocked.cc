@@ -1,4 +1,6 @@
 // A window's rows are read where they lie: tables say where. A task is one head of one window.
+// Biases and masks are spread to a score each when the layer is prepared, which is refused where
+// that would take more memory than any published model's (24 x 24 positions and 48 heads: 64 MB).
 #include <algorithm>
 #include <cmath>
 
@@ -7,7 +9,6 @@
 #include "ops/simd/attention.h"
 #include "ops/simd/reduce.h"
 #include "ops/simd/target.h"
-#include "ops/strategy_of.h"
 #include "ops/window_attention/window_attention.h"
 
 namespace leadsman::ops {
@@ -173,10 +174,32 @@ class BlockedKernel final : public Kernel {
   std::vector<std::int32_t> positions_;
 };
 
+class Blocked final : public Strategy {
+ public:
+  std::string_view name() const override { return "blocked"; }
+
+  std::string refusal(const OpContext& context) const override {
+    constexpr double kMostEntries = 1 << 26;  // 256 MB
+    const WindowGeometry g(context);
+    const auto tokens = static_cast<double>(g.tokens);
+    const double biases = context.weight("position_bias") ? static_cast<double>(g.heads) : 0.0;
+    const double masks = g.shift_down + g.shift_right > 0 ? 3.0 : 0.0;
+    const double places = static_cast<double>(g.rows) * static_cast<double>(g.columns) * tokens;
+    if ((biases + masks) * tokens * tokens + places <= kMostEntries) return {};
+    return "tables of windows of " + std::to_string(g.window_height) + " x " +
+           std::to_string(g.window_width) + " positions would take over 256 MB";
+  }
+
+  std::unique_ptr<Kernel> prepare(const OpContext& context,
+                                  const Epilogue& /*epilogue*/) const override {
+    return std::make_unique<BlockedKernel>(context);
+  }
+};
+
 }  // namespace
 
 const Strategy& window_attention_blocked() {
-  static const StrategyOf<BlockedKernel> instance("blocked");
+  static const Blocked instance;
   return instance;
 }
 

@@ -86,6 +86,9 @@ TEST(Shape, WithChangesOneSize) {
 }
 
 TEST(Shape, CountsChannelsAndPositions) {
+  EXPECT_EQ(channel_axis({2, 3, 5, 7}), 1);
+  EXPECT_EQ(channel_axis({2, 3, 5}), 2);
+  EXPECT_EQ(channel_axis({2, 3}), 1);
   EXPECT_EQ(channel_count({2, 3, 5, 7}), 3);
   EXPECT_EQ(position_count({2, 3, 5, 7}), 70);
   EXPECT_EQ(channel_count({2, 3, 5}), 5);

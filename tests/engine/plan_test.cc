@@ -53,6 +53,35 @@ TEST(Fusion, SeesThroughAShortcutThatIsAView) {
   EXPECT_EQ(step_with(*make(b, options), "main"), (Names{"main"}));
 }
 
+TEST(Fusion, FoldsScalesIntoTheProductsBeforeThem) {
+  const GraphBuilder b = testing::small_scaled_net();
+  const auto plan = make(b);
+  EXPECT_EQ(step_with(*plan, "conv"), (Names{"conv", "norm", "affine"}));
+  EXPECT_EQ(step_with(*plan, "fc"), (Names{"fc", "layer_scale", "add", "gelu"}));
+  PlanOptions options;
+  options.observe = {"norm", "fc"};
+  const auto cut = make(b, options);
+  EXPECT_EQ(step_with(*cut, "conv"), (Names{"conv", "norm"}));
+  EXPECT_EQ(step_with(*cut, "affine"), (Names{"affine"}));
+  EXPECT_EQ(step_with(*cut, "fc"), (Names{"fc"}));
+  EXPECT_EQ(step_with(*cut, "layer_scale"), (Names{"layer_scale"}));
+}
+
+TEST(Fusion, LeavesAScaleBehindAnActivationOrASumAlone) {
+  GraphBuilder b;
+  b.image(3, 6, 6);
+  b.layer("after_relu", "scale", {b.activation("relu", b.conv("first", "image", 3, 4, 3))},
+          {{"factor", 2.0}});
+  b.layer("sum", "add", {b.conv("second", "after_relu", 4, 4, 3), "after_relu"});
+  b.layer("after_sum", "scale", {"sum"}, {{"factor", 2.0}});
+  b.output("after_sum");
+  const auto plan = make(b);
+  EXPECT_EQ(step_with(*plan, "first"), (Names{"first", "relu"}));
+  EXPECT_EQ(step_with(*plan, "second"), (Names{"second", "sum"}));
+  EXPECT_EQ(step_with(*plan, "after_relu"), (Names{"after_relu"}));
+  EXPECT_EQ(step_with(*plan, "after_sum"), (Names{"after_sum"}));
+}
+
 TEST(Fusion, TakesGeluAndResidualIntoTransformerProducts) {
   const auto plan = make(testing::small_transformer());
   EXPECT_EQ(step_with(*plan, "block0.fc1"), (Names{"block0.fc1", "block0.gelu"}));

@@ -27,7 +27,8 @@ std::vector<Net> nets() {
   return {{"conv", testing::small_conv_net(), {1, 3, 24, 20}},
           {"conv, batch 3, odd size", testing::small_conv_net(2), {3, 3, 29, 17}},
           {"transformer", testing::small_transformer(), {1, 3, 16, 16}},
-          {"transformer, batch 2, larger", testing::small_transformer(2), {2, 3, 20, 28}}};
+          {"transformer, batch 2, larger", testing::small_transformer(2), {2, 3, 20, 28}},
+          {"scaled products, batch 2", testing::small_scaled_net(), {2, 3, 7, 6}}};
 }
 
 PlanOptions options_for(const Net& net, int threads = 2) {

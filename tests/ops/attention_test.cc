@@ -80,6 +80,22 @@ TEST(AttentionBlocked, LongSequencesAgreeWithTheReference) {
   }
 }
 
+// Few keys at once, and block by block; a bias for each head, and one for all.
+TEST(AttentionBlocked, AddsThePositionBias) {
+  Random random(39);
+  for (const std::int64_t keys : {1, 15, 49, 513, 777}) {
+    for (const bool each_head : {false, true}) {
+      const Sizes z{2, 3, 17, 13, keys};
+      for (const char* op : {"attention", "attention_weights"}) {
+        OpCase c = separate_case(random, z, op);
+        c.weights["position_bias"] = random.tensor({each_head ? z.heads : 1, z.t, z.s}, -3, 3);
+        SCOPED_TRACE(std::string(op) + " with " + std::to_string(keys) + " keys");
+        check_fast_strategy(c, "blocked", 16.0);
+      }
+    }
+  }
+}
+
 TEST(AttentionWeights, RowsAreNonNegativeAndSumToOne) {
   Random random(32);
   const Sizes z{2, 3, 17, 23, 41};

@@ -102,6 +102,35 @@ TEST(BatchNorm, Standardises) {
   }
 }
 
+// Factors that are repeated, against the product with all of them written out.
+TEST(Mul, OfFactorsIsThatOfRepeatedOnes) {
+  Random random(45);
+  for (int i = 0; i < 40; ++i) {
+    const std::int64_t n = random.integer(1, 3);
+    const std::int64_t c = random.integer(1, 70);
+    const Shape full = random.coin() ? Shape{n, c, random.integer(1, 20), random.integer(1, 20)}
+                                     : Shape{n, c, random.integer(1, 90)};
+    const bool over_last = random.coin();  // positions of an image, channels of tokens
+    const std::int64_t inner = full.elements() / (n * c);
+    Shape small = full.with(1, 1);
+    if (over_last) small = full.rank() == 4 ? Shape{n, c, 1, 1} : full.with(2, 1);
+    const Tensor x = random.tensor(full);
+    const Tensor factors = random.tensor(small);
+    Tensor repeated(full);
+    for (std::int64_t at = 0; at < full.elements(); ++at) {
+      repeated.mutable_data()[at] =
+          factors.data()[over_last ? at / inner : at / (c * inner) * inner + at % inner];
+    }
+    SCOPED_TRACE(full.to_string() + " times " + small.to_string());
+    const Tensor expected = run_op({.op = "mul", .inputs = {x, repeated}}, "reference");
+    const OpCase product{.op = "mul", .inputs = {x, factors}};
+    for (const int threads : {1, 3}) {
+      expect_same_bits(run_op(product, "reference", {.threads = threads, .in_place = threads == 3}),
+                       expected);
+    }
+  }
+}
+
 // Both summands, and both factors, may be the memory that is overwritten.
 TEST(InPlace, OfOneInputTwice) {
   Random random(44);

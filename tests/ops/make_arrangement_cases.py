@@ -10,7 +10,7 @@ torchvision compute them, beside those of make_operator_cases.py.
 import numpy as np
 import torch
 import torch.nn.functional as F
-from make_operator_cases import Cases
+from make_operator_cases import INF, NAN, Cases
 from torchvision.models.swin_transformer import shifted_window_attention
 
 GENERATOR = np.random.default_rng(77)
@@ -230,9 +230,39 @@ def norms():
     return [groups, local, l2]
 
 
+def factors():
+    """What a product repeats: over positions, or over channels."""
+    cases = Cases("mul", "factors")
+    for name, first, second in (("each_position_of_an_image", (2, 7, 3, 4), (2, 1, 3, 4)),
+                                ("one_channel", (2, 1, 3, 4), (2, 1, 1, 1)),
+                                ("one_position", (2, 7, 1, 1), (2, 1, 1, 1)),
+                                ("each_channel_of_tokens", (2, 5, 9), (2, 1, 9)),
+                                ("each_token", (2, 5, 9), (2, 5, 1)),
+                                ("each_item", (3, 7), (3, 1))):
+        a, b = rand(*first), rand(*second)
+        cases.add(name, [a, b], a * b)
+    a, b = rand(1, 3, 2, 2), torch.tensor([0.0, NAN, INF, 1.0], dtype=torch.float64)
+    a[0, :, 0, 0] = INF
+    cases.add("nan", [a, b.reshape(1, 1, 2, 2)], a * b.reshape(1, 1, 2, 2))
+    return [cases]
+
+
+def channel_pools():
+    cases = Cases("channel_pool")
+    for name, shape, axis in (("image", (2, 7, 3, 4), 1), ("one_channel", (1, 1, 2, 3), 1),
+                              ("tokens", (2, 5, 33), 2)):
+        x = rand(*shape)
+        cases.add(f"mean_of_{name}", [x], x.mean(axis, keepdim=True), {"kind": "mean"})
+        cases.add(f"max_of_{name}", [x], x.amax(axis, keepdim=True), {"kind": "max"})
+    x = rand(1, 3, 2, 2)
+    x[0, 0, 0, 0], x[0, 1, 0, 1], x[0, 2, 1, 0], x[0, 2, 1, 1] = NAN, NAN, NAN, -INF
+    cases.add("max_with_nan", [x], x.amax(1, keepdim=True), {"kind": "max"})
+    return [cases]
+
+
 def main():
     groups = [*scale(), *slices(), *shapes(), *window_attention(), *grid_attention(),
-              *biased_attention(), *other_ranks(), *sides_and_sizes(), *norms()]
+              *biased_attention(), *other_ranks(), *sides_and_sizes(), *norms(), *factors(), *channel_pools()]
     total = sum(cases.write() for cases in groups)
     print(f"{len(groups)} files, {total} bytes")
 

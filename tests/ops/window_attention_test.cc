@@ -63,6 +63,25 @@ TEST(WindowAttentionBlocked, LargeWindowsAgreeWithTheReference) {
   check_fast_strategy(c, "blocked", 16.0);
 }
 
+// A bundle of a few bytes may ask for windows whose tables no memory holds.
+TEST(WindowAttentionBlocked, RefusesTablesThatNoModelNeeds) {
+  const auto shifted = [](std::int64_t size, std::int64_t window) {
+    OpCase c{.op = "window_attention", .inputs = {Tensor(Shape{1, 3, size, size})}};
+    c.attributes.set("heads", std::int64_t{1});
+    c.attributes.set("window", Pair{window, window});
+    c.attributes.set("shift", Pair{1, 1});
+    return c;
+  };
+  EXPECT_EQ(refusal(shifted(65, 64), "blocked"), "");
+  EXPECT_EQ(refusal(shifted(129, 128), "blocked"),
+            "tables of windows of 128 x 128 positions would take over 256 MB");
+  EXPECT_EQ(refusal(shifted(1025, 1024), "blocked"),
+            "tables of windows of 1024 x 1024 positions would take over 256 MB");
+  EXPECT_EQ(refusal(shifted(129, 128), "reference"), "");
+  // One window is not shifted: without a bias there is nothing to keep but where positions are.
+  EXPECT_EQ(refusal(shifted(128, 128), "blocked"), "");
+}
+
 // One window over the whole map, no bias: attention between all positions.
 TEST(WindowAttention, OfOneWindowIsAttention) {
   Random random(63);

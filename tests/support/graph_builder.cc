@@ -99,6 +99,21 @@ GraphBuilder small_conv_net(std::uint64_t seed) {
   return b;
 }
 
+GraphBuilder small_scaled_net(std::uint64_t seed) {
+  GraphBuilder b(seed);
+  b.image(3, 7, 6);
+  b.batch_norm("norm", b.conv("conv", "image", 3, 8, 3), 8);
+  b.layer("affine", "scale", {"norm"}, {{"factor", 0.5}, {"offset", 0.25}});
+  b.weight("affine", "weight", {8, 1, 1}, -1.5, 1.5);
+  b.weight("affine", "bias", {8}, -0.2, 0.2);
+  b.layer("layer_scale", "scale", {b.linear("fc", "affine", 8, 8)});
+  b.weight("layer_scale", "weight", {8, 1, 1}, -1.5, 1.5);
+  b.layer("add", "add", {"affine", "layer_scale"});
+  b.activation("gelu", "add", "gelu");
+  b.output(b.linear("head", b.layer("pool", "mean", {"gelu"}), 8, 10));
+  return b;
+}
+
 GraphBuilder small_transformer(std::uint64_t seed) {
   constexpr std::int64_t kWidth = 24;
   GraphBuilder b(seed);

@@ -46,6 +46,9 @@ class GraphBuilder {
 /// A residual network in small: stem with pooling, a plain and a downsampling block, depthwise
 /// convolution, head. Input [N, 3, H, W], output "head" [N, 10].
 GraphBuilder small_conv_net(std::uint64_t seed = 1);
+/// Products followed by `scale`: a convolution with norm, and a linear layer over an image's
+/// positions in a residual branch. Input [N, 3, H, W], output "head" [N, 10].
+GraphBuilder small_scaled_net(std::uint64_t seed = 1);
 /// A pre-norm vision transformer in small, patch 4, two blocks. Input [N, 3, 16, 16] or larger,
 /// output "head" [N, 10]; the attention layers are "block0.attention" and "block1.attention".
 GraphBuilder small_transformer(std::uint64_t seed = 1);

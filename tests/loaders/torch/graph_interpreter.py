@@ -236,6 +236,11 @@ def mean(x, a, w):
     return x.mean((2, 3) if x.dim() == 4 else 1, keepdim=a.get("keep", False))
 
 
+def channel_pool(x, a, w):
+    axis = 1 if x.dim() == 4 else -1
+    return x.mean(axis, keepdim=True) if a["kind"] == "mean" else x.amax(axis, keepdim=True)
+
+
 def concat(inputs, a, w):
     return torch.cat(inputs, 1 if inputs[0].dim() == 4 else -1)
 
@@ -289,6 +294,7 @@ OPERATORS = {
     "attention_weights": attention_weights,
     "select": _one(lambda x, a, w: x[:, a["index"]]),
     "mean": _one(mean),
+    "channel_pool": _one(channel_pool),
     "softmax": _one(lambda x, a, w: torch.softmax(x, 1 if x.dim() == 4 else -1)),
     "identity": _one(lambda x, a, w: x),
 }

@@ -152,6 +152,30 @@ class Squeeze(nn.Module):
         return self.head((scale * x).mean([-2, -1]))
 
 
+class Gates(nn.Module):
+    """Factors of every kind: for channels and positions (Woo et al. 2018), of images and tokens."""
+
+    def __init__(self):
+        super().__init__()
+        self.channels, self.positions = nn.Linear(8, 8), nn.Conv2d(2, 1, 3, padding=1)
+        self.features, self.tokens = nn.Linear(8, 8), nn.Linear(8, 1)
+        self.again = nn.Conv2d(2, 1, 1)
+        self.head = nn.Linear(8, 3)
+
+    def forward(self, x):
+        n, c, h, w = x.shape
+        x = torch.sigmoid(self.channels(x.mean((2, 3)))).view(n, c, 1, 1) * x
+        seen = torch.cat((x.mean(1, keepdim=True), x.amax(1, keepdim=True)), 1)
+        x = torch.sigmoid(self.positions(seen)) * x
+        seen = torch.cat((torch.max(x, 1)[0].unsqueeze(1), torch.mean(x, 1).unsqueeze(1)), 1)
+        x = x * torch.sigmoid(self.again(seen))
+        tokens = x.flatten(2).transpose(1, 2)
+        tokens = tokens * torch.sigmoid(self.features(tokens.mean(1, keepdim=True)))
+        tokens = tokens * torch.sigmoid(self.tokens(tokens) + tokens.max(-1, keepdim=True)[0])
+        y = tokens.mean(1)
+        return self.head(y * torch.sigmoid(self.tokens(y)))
+
+
 class ChannelsLast(nn.Module):
     """Images normalised over their channels, through a permutation there and back."""
 
@@ -307,6 +331,7 @@ SAMPLES = {
     "in_place": (InPlace, [(1, 4, 6, 5)]),
     "shared": (Shared, [(1, 4, 6, 5)]),
     "squeeze": (Squeeze, [(2, 8, 6, 5)]),
+    "gates": (Gates, [(2, 8, 6, 5)]),
     "channels_last": (ChannelsLast, [(1, 6, 6, 5)]),
     "perceptron": (Perceptron, [(3, 12)]),
     "attention": (Attention, [(2, 5, 12), (2, 7, 8), (2, 7, 10)]),

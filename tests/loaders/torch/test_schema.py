@@ -90,6 +90,7 @@ RIGHT = {
         "scale", attributes={"factor": 2, "offset": -0.5}, weights={"weight": "w", "bias": "b"}
     ),
     "slice": layer("slice", attributes={"axis": "tokens", "start": 1, "count": 0}),
+    "channel_pool": layer("channel_pool", attributes={"kind": "max"}),
     "channel_shuffle": layer("channel_shuffle", attributes={"groups": 2}),
     "features_to_image": layer("features_to_image"),
     "tokens_to_image": layer("tokens_to_image", ["t", "i"]),
