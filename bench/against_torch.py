@@ -4,8 +4,8 @@
     python3 bench/against_torch.py --leadsman BINARY [--models NAME,NAME] [--threads 1,2]
             [--size HxW] [--batch N] [--rounds N] [--json FILE] [--python PYTHON] [-- OPTION...]
 
-Models are torchvision's classifiers, buttons-conv and buttons-vit. For each model and number of
-threads: the model is exported, both sides compute one input and must agree; PyTorch is tried in
+Models are torchvision's classifiers, vit_s_16, buttons-conv and buttons-vit. Each is exported;
+for each number of threads, both sides compute one input and must agree; PyTorch is tried in
 every form (torch_peer.py) with every BLAS at hand, and its fastest one competes; then the two run
 in turns, A B A B. Each side is a process of its own, with its start-up left out. `ratio` is ours /
 theirs of the medians: below 1, ours is faster. Options behind -- go to `leadsman time`.
@@ -27,6 +27,7 @@ HERE = pathlib.Path(__file__).resolve().parent
 MODELS = ["resnet18", "resnet50", "vgg16", "mobilenet_v2", "vit_b_16", "buttons-conv", "buttons-vit"]
 AGREEMENT = 2e-4  # of the outputs' relative L2 difference
 TURN_SECONDS = 0.25
+SEARCH_SECONDS = 1.5  # of one form, while the fastest one is looked for
 REST_SECONDS = 0.02  # idle threads of either side stop spinning meanwhile
 
 
@@ -81,7 +82,8 @@ def fastest_peer(command, threads):
         for form in side.facts["forms"]:
             seconds = side.ask(f"run {form} 1")["seconds"][0]
             if best is None or seconds < 2 * best[0]:
-                seconds = statistics.median(side.ask(f"run {form} 9")["seconds"])
+                count = max(3, min(9, round(SEARCH_SECONDS / seconds)))
+                seconds = statistics.median(side.ask(f"run {form} {count}")["seconds"])
             tried.append({"form": form, "settings": settings, "ms": seconds * 1e3})
             if best is None or seconds < best[0]:
                 best = (seconds, settings, form)
@@ -94,48 +96,62 @@ def runs_a_turn(seconds):
     return max(1, min(200, round(TURN_SECONDS / seconds)))
 
 
-def duel(options, model, threads):
-    with tempfile.TemporaryDirectory(prefix="leadsman-bench-") as name:
-        folder = pathlib.Path(name)
-        peer = [options.python, HERE / "torch_peer.py"]
-        sized = ["--size", options.size] if options.size else []
+class Prepared:
+    """A model's bundle, state dict and input in a folder that goes away at the end."""
+
+    def __init__(self, python, model, size=None, batch=1):
+        self.model, self.batch = model, batch
+        self.peer = [python, HERE / "torch_peer.py"]
+        self.holder = tempfile.TemporaryDirectory(prefix="leadsman-bench-")
+        self.folder = pathlib.Path(self.holder.name)
+        self.bundle = self.folder / "bundle"
+        sized = ["--size", size] if size else []
         prepared = subprocess.run(
-            [*peer, "prepare", model, folder, "--batch", str(options.batch), *sized],
+            [*self.peer, "prepare", model, self.folder, "--batch", str(batch), *sized],
             check=True,
             stdout=subprocess.PIPE,
             text=True,
         )
-        size = json.loads(prepared.stdout.splitlines()[-1])["size"]
-        theirs, form, settings, tried = fastest_peer(
-            [*peer, "turns", model, folder, "--threads", threads], threads
-        )
-        bundle, outputs = folder / "bundle", folder / "ours.npz"
-        ours = Side(
-            [options.leadsman, "time", bundle, "--threads", threads, "--turns", "--out", outputs]
-            + ["--tensor", folder / "input.npy", *options.rest]
-        )
-        agreement = theirs.ask(f"check {form} {outputs}")
-        if not agreement["relative_l2"] <= AGREEMENT:
-            sys.exit(f"{model}: the outputs differ: {agreement}")
-        requests = {
-            "ours": lambda count: ours.ask(str(count)),
-            "torch": lambda count: theirs.ask(f"run {form} {count}"),
-        }
-        counts = {side: runs_a_turn(min(ask(2)["seconds"])) for side, ask in requests.items()}
-        seconds = {side: [] for side in requests}
-        for _ in range(options.rounds):
-            for side, ask in requests.items():
-                time.sleep(REST_SECONDS)
-                seconds[side] += ask(counts[side])["seconds"]
-        ours.close()
-        theirs.close()
+        self.size = json.loads(prepared.stdout.splitlines()[-1])["size"]
+
+    def __enter__(self):
+        return self
+
+    def __exit__(self, *_):
+        self.holder.cleanup()
+
+
+def duel(leadsman, prepared, threads, rounds, rest=()):
+    theirs, form, settings, tried = fastest_peer(
+        [*prepared.peer, "turns", prepared.model, prepared.folder, "--threads", threads], threads
+    )
+    outputs = prepared.folder / "ours.npz"
+    ours = Side(
+        [leadsman, "time", prepared.bundle, "--threads", threads, "--turns", "--out", outputs]
+        + ["--tensor", prepared.folder / "input.npy", *rest]
+    )
+    agreement = theirs.ask(f"check {form} {outputs}")
+    if not agreement["relative_l2"] <= AGREEMENT:
+        sys.exit(f"{prepared.model}: the outputs differ: {agreement}")
+    requests = {
+        "ours": lambda count: ours.ask(str(count)),
+        "torch": lambda count: theirs.ask(f"run {form} {count}"),
+    }
+    counts = {side: runs_a_turn(min(ask(2)["seconds"])) for side, ask in requests.items()}
+    seconds = {side: [] for side in requests}
+    for _ in range(rounds):
+        for side, ask in requests.items():
+            time.sleep(REST_SECONDS)
+            seconds[side] += ask(counts[side])["seconds"]
+    ours.close()
+    theirs.close()
     median = {side: statistics.median(values) for side, values in seconds.items()}
     gflops = 2e-9 * ours.facts["macs"] / median["ours"]
     return {
-        "model": model,
+        "model": prepared.model,
         "threads": threads,
-        "size": size,
-        "batch": options.batch,
+        "size": prepared.size,
+        "batch": prepared.batch,
         "ours_ms": median["ours"] * 1e3,
         "torch_ms": median["torch"] * 1e3,
         "ratio": median["ours"] / median["torch"],
@@ -198,11 +214,15 @@ def main():
     }
     print(HEADER, flush=True)
     for model in options.models.split(","):
-        for threads in options.threads.split(","):
-            report["results"].append(duel(options, model, int(threads)))
-            print(row(report["results"][-1]), flush=True)
-            if options.json:
-                pathlib.Path(options.json).write_text(json.dumps(report, indent=1) + "\n")
+        with Prepared(options.python, model, options.size, options.batch) as prepared:
+            for threads in options.threads.split(","):
+                result = duel(
+                    options.leadsman, prepared, int(threads), options.rounds, options.rest
+                )
+                report["results"].append(result)
+                print(row(result), flush=True)
+                if options.json:
+                    pathlib.Path(options.json).write_text(json.dumps(report, indent=1) + "\n")
 
 
 if __name__ == "__main__":

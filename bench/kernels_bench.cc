@@ -121,13 +121,18 @@ void add(const std::string& name, const Layer& layer) {
   })->UseRealTime();
 }
 
-void add_matrix(std::int64_t rows, std::int64_t depth, std::int64_t cols) {
-  add("matrix/" + std::to_string(rows) + "x" + std::to_string(depth) + "x" + std::to_string(cols),
-      {.op = "linear",
-       .attributes = {},
-       .inputs = {{rows, depth}},
-       .weights = {{"weight", {cols, depth}}, {"bias", {cols}}},
-       .activation = {ops::ActivationKind::kRelu, 0.0F}});
+void add_matrix(std::int64_t rows, std::int64_t depth, std::int64_t cols,
+                ops::ActivationKind activation = ops::ActivationKind::kRelu) {
+  std::string name =
+      "matrix/" + std::to_string(rows) + "x" + std::to_string(depth) + "x" + std::to_string(cols);
+  if (activation != ops::ActivationKind::kRelu) {
+    name += "_" + std::string(ops::activation_name(activation));
+  }
+  add(name, {.op = "linear",
+             .attributes = {},
+             .inputs = {{rows, depth}},
+             .weights = {{"weight", {cols, depth}}, {"bias", {cols}}},
+             .activation = {activation, 0.0F}});
 }
 
 void add_conv(std::int64_t size, std::int64_t channels, std::int64_t out, std::int64_t kernel,
@@ -154,6 +159,17 @@ void add_attention(std::int64_t tokens, std::int64_t channels, std::int64_t head
   add("attention/" + std::to_string(tokens) + "x" + std::to_string(channels), layer);
 }
 
+void add_windows(std::int64_t size, std::int64_t channels) {
+  Layer layer{.op = "window_attention",
+              .attributes = {},
+              .inputs = {{1, 3 * channels, size, size}},
+              .weights = {{"position_bias", {169, channels / 32}}}};
+  layer.attributes.set("heads", channels / 32);
+  layer.attributes.set("window", std::int64_t{7});
+  layer.attributes.set("shift", std::int64_t{3});
+  add("windows/" + std::to_string(size) + "x" + std::to_string(channels), layer);
+}
+
 void add_all() {
   // ResNet's and MobileNetV2's 1x1 convolutions and ViT-B/16's linear layers.
   for (const auto& [m, k, n] : std::vector<std::array<std::int64_t, 3>>{{3136, 64, 64},
@@ -173,6 +189,11 @@ void add_all() {
                                                                         {1, 2048, 1000}}) {
     add_matrix(m, k, n);
   }
+  add_matrix(3136, 96, 384, ops::ActivationKind::kGelu);
+  add_matrix(196, 384, 1536, ops::ActivationKind::kGelu);
+  add_matrix(12544, 16, 96, ops::ActivationKind::kSilu);
+  add_matrix(196, 80, 480, ops::ActivationKind::kSilu);
+  add_matrix(196, 112, 672, ops::ActivationKind::kHardSwish);
   add_conv(56, 64, 64, 3, 1, 1);
   add_conv(28, 128, 128, 3, 1, 1);
   add_conv(14, 256, 256, 3, 1, 1);
@@ -199,6 +220,8 @@ void add_all() {
   }
   add_attention(197, 768, 12);
   add_attention(1025, 768, 12);
+  add_windows(56, 96);
+  add_windows(14, 384);
 }
 
 }  // namespace

@@ -4,8 +4,8 @@
     torch_peer.py prepare MODEL FOLDER --size HxW --batch N
     torch_peer.py turns MODEL FOLDER --threads N
 
-MODEL is a classifier of torchvision, buttons-conv or buttons-vit. `prepare` leaves in FOLDER the
-exported bundle, the state dict and an input. `turns` writes a line of facts, then answers each line
+MODEL is a classifier of torchvision, vit_s_16, buttons-conv or buttons-vit. `prepare` leaves in
+FOLDER the exported bundle, the state dict and an input. `turns` writes a line of facts, then answers each line
 on standard input by a line of JSON:
 
     run FORM COUNT     seconds of COUNT runs, the model being in that form (FORMS)
@@ -38,8 +38,25 @@ def build(name, size):
         if name == "buttons-conv":
             return models.ButtonConvNet(), size
         return models.ButtonViT(image=size[0]), size
+    if name == "vit_s_16":
+        return small_vit(size or (224, 224)), size or (224, 224)
     module, preprocess = leadsman_export.torchvision_model(name, size, seed=1)
     return module, tuple(preprocess["crop"])
+
+
+def small_vit(size):
+    """The small ViT (Touvron et al. 2021, table 1), which torchvision does not name."""
+    from torchvision.models import VisionTransformer
+
+    torch.manual_seed(1)
+    return VisionTransformer(
+        image_size=size[0],
+        patch_size=16,
+        num_layers=12,
+        num_heads=6,
+        hidden_dim=384,
+        mlp_dim=1536,
+    )
 
 
 def prepare(options):

@@ -59,6 +59,8 @@ constexpr int wide(int rows) {
 }
 #endif
 
+constexpr int kMaxWidth = wide(1);
+
 struct Tile {
   const float* const* table;
   std::int64_t table_stride;
@@ -70,6 +72,7 @@ struct Tile {
   float* c;
   std::int64_t c_stride;
   const float* residual;
+  std::int64_t residual_stride;
   std::int64_t cols;  // valid ones, counted from the tile's first
   float low;
   float high;
@@ -105,6 +108,19 @@ HWY_NOINLINE void store_part(const float* values, const float* residual, float* 
     if (value < low) value = low;
     if (value > high) value = high;
     c[i] = value;
+  }
+}
+
+// `count` values of each row of `stage` to where they belong.
+HWY_INLINE void store_rows(const float* stage, std::int64_t stage_stride, float* c,
+                           std::int64_t c_stride, std::int64_t rows, std::int64_t count) {
+  const D d;
+  for (std::int64_t r = 0; r < rows; ++r) {
+    std::int64_t i = 0;
+    for (; i + kLanes <= count; i += kLanes) hn::StoreU(hn::Load(d, stage + i), d, c + i);
+    for (; i < count; ++i) c[i] = stage[i];
+    stage += stage_stride;
+    c += c_stride;
   }
 }
 
@@ -149,7 +165,7 @@ void run_tile(const Tile& t) {
     for (int r = 0; r < kRows; ++r) {
       float* c = t.c + r * t.c_stride + v * kLanes;
       const float* residual =
-          t.residual == nullptr ? nullptr : t.residual + r * t.c_stride + v * kLanes;
+          t.residual == nullptr ? nullptr : t.residual + r * t.residual_stride + v * kLanes;
       V value = sum[r][v];
       if (HWY_LIKELY((v + 1) * kLanes <= t.cols)) {
         if (residual != nullptr) value = hn::Add(value, hn::LoadU(d, residual));
@@ -206,11 +222,14 @@ void matrix_product(const MatrixCall& call) {
             .c = nullptr,
             .c_stride = call.c_stride,
             .residual = nullptr,
+            .residual_stride = call.c_stride,
             .cols = 0,
             .low = bounds ? bounds->low : -kInfinity,
             .high = bounds ? bounds->high : kInfinity,
             .prefetch = nullptr,
             .prefetch_step = 0};
+  // What is to be activated waits here: side by side, many values are in flight at once.
+  HWY_ALIGN float stage[kMaxRows * kMaxWidth * kLanes] = {};
   std::int64_t width = 0;
   for (std::int64_t first = 0; first < vectors; first += width) {
     width = wide(tallest);
@@ -223,6 +242,7 @@ void matrix_product(const MatrixCall& call) {
     tile.b = call.panels + column / kPanel * panel_stride + column % kPanel;
     tile.bias = call.bias + column;
     tile.cols = call.cols - column;
+    tile.c_stride = activate == nullptr ? call.c_stride : width * kLanes;
     // The panels of the columns that follow are fetched meanwhile, spread over this column's tiles.
     const std::int64_t next = column + width * kLanes;
     const float* ahead =
@@ -245,15 +265,18 @@ void matrix_product(const MatrixCall& call) {
       } else {
         tile.table = call.table + row;
       }
-      tile.c = call.c + row * call.c_stride + column;
+      float* const c = call.c + row * call.c_stride + column;
+      tile.c = activate == nullptr ? c : stage;
       tile.residual =
           call.residual == nullptr ? nullptr : call.residual + row * call.c_stride + column;
       tile.prefetch = reinterpret_cast<const char*>(ahead) +
                       i * call.taps * (call.depth / kUnroll) * tile.prefetch_step;
       kTiles[rows - 1][static_cast<std::size_t>(shift)](tile);
       if (activate != nullptr) {
-        activate({tile.c, call.c_stride, tile.c, call.c_stride, static_cast<std::int64_t>(rows),
-                  std::min(tile.cols, width * kLanes), call.activation.parameter});
+        const auto count = static_cast<std::int64_t>(rows);
+        activate({stage, 0, stage, 0, 1, count * tile.c_stride, call.activation.parameter});
+        store_rows(stage, tile.c_stride, c, call.c_stride, count,
+                   std::min(tile.cols, tile.c_stride));
       }
     }
   }
