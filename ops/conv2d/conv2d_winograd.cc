@@ -2,9 +2,10 @@
 // position of a tile is a matrix product of its own over all tiles, and the sums are transformed
 // back.
 //
-// Where there are many tiles, a task takes some of them through all three stages in scratch that
-// stays in the second-level cache. Where there are few, the weights are what takes time to fetch:
-// each stage is then one parallel loop over all tiles, which reads every weight once.
+// Where there are many tiles, or groups of channels, a task takes some tiles of one group through
+// all three stages in scratch that stays in the second-level cache. Where there are few, the
+// weights are what takes time to fetch: each stage is then one parallel loop over all tiles, which
+// reads every weight once.
 //
 // A NaN or an infinity makes all outputs of its tiles NaN, not only those whose window sees it.
 #include <algorithm>
@@ -37,19 +38,19 @@ class WinogradKernel final : public Kernel {
         tiles_w_((g_.out_w + tile - 1) / tile),
         tiles_(g_.n * tiles_h_ * tiles_w_),
         weights_(context, tile),
-        zeros_(std::max(g_.c, weights_.out_columns())) {
+        zeros_(std::max(g_.c, weights_.part_columns())) {
     simd::choose_target();
     constexpr std::int64_t kFewTiles = 64;
     constexpr std::int64_t kScratchFloats = 80 << 10;
     constexpr std::int64_t kFewestTiles = 12;
-    in_phases_ = tiles_ <= kFewTiles;
-    const std::int64_t tile_floats = side_ * side_ * (g_.c + weights_.group_columns());
+    in_phases_ = g_.groups == 1 && tiles_ <= kFewTiles;
+    const std::int64_t tile_floats = side_ * side_ * (g_.group_in() + weights_.part_columns());
     const std::int64_t most =
         in_phases_ ? tiles_ : std::max(kFewestTiles, kScratchFloats / tile_floats);
     blocks_ = (tiles_ + most - 1) / std::max<std::int64_t>(1, most);
     block_tiles_ = blocks_ == 0 ? 0 : (tiles_ + blocks_ - 1) / blocks_;
-    sum_columns_ = in_phases_ ? weights_.out_columns() : weights_.group_columns();
-    input_stride_ = position_stride(block_tiles_ * g_.c);
+    sum_columns_ = in_phases_ ? g_.out_c : weights_.part_columns();
+    input_stride_ = position_stride(block_tiles_ * g_.group_in());
     sums_stride_ = position_stride(block_tiles_ * sum_columns_);
   }
 
@@ -63,21 +64,23 @@ class WinogradKernel final : public Kernel {
       run_phases(call);
       return;
     }
-    parallel_for(call.threads, blocks_, [&](std::int64_t block, int worker) {
+    const std::int64_t parts = weights_.parts() / g_.groups;  // of a group
+    parallel_for(call.threads, g_.groups * blocks_, [&](std::int64_t task, int worker) {
+      const std::int64_t group = task / blocks_;
+      const std::int64_t block = task % blocks_;
       float* input = scratch(call, worker);
       float* sums = input + side_ * side_ * input_stride_;
       const std::int64_t first = block * tiles_ / blocks_;
       const std::int64_t count = (block + 1) * tiles_ / blocks_ - first;
       for (std::int64_t i = 0; i < count; ++i) {
-        transform_input(call, first + i, input + i * g_.c);
+        transform_input(call, first + i, group, input + i * g_.group_in());
       }
-      for (std::int64_t group = 0; group < weights_.groups(); ++group) {
+      for (std::int64_t part = group * parts; part < (group + 1) * parts; ++part) {
         for (std::int64_t p = 0; p < side_ * side_; ++p) {
-          multiply(group, p, count, input, sums, weights_.next(group, p));
+          multiply(part, p, count, input, sums, weights_.next(part, p));
         }
-        const std::int64_t column = weights_.first_column(group);
         for (std::int64_t i = 0; i < count; ++i) {
-          transform_output(call, first + i, column, weights_.columns(group),
+          transform_output(call, first + i, weights_.first_output(part), weights_.columns(part),
                            sums + i * sum_columns_);
         }
       }
@@ -97,14 +100,15 @@ class WinogradKernel final : public Kernel {
     float* input = scratch(call, 0);
     float* sums = input + side_ * side_ * input_stride_;
     // A tile's transform is a few microseconds.
-    parallel_for(call.threads, tiles_,
-                 [&](std::int64_t tile, int) { transform_input(call, tile, input + tile * g_.c); });
+    parallel_for(call.threads, tiles_, [&](std::int64_t tile, int) {
+      transform_input(call, tile, 0, input + tile * g_.c);
+    });
     const std::int64_t positions = side_ * side_;
-    const std::int64_t products = weights_.groups() * positions;
+    const std::int64_t products = weights_.parts() * positions;
     parallel_for(call.threads, products, [&](std::int64_t task, int) {
-      const std::int64_t group = task / positions;
+      const std::int64_t part = task / positions;
       const std::int64_t next = task + call.threads;
-      multiply(group, task % positions, tiles_, input, sums + weights_.first_column(group),
+      multiply(part, task % positions, tiles_, input, sums + weights_.first_output(part),
                next < products ? weights_.at(next / positions, next % positions) : nullptr);
     });
     parallel_for(call.threads, tiles_, [&](std::int64_t tile, int) {
@@ -121,9 +125,11 @@ class WinogradKernel final : public Kernel {
     return {row / tiles_h_, row % tiles_h_ * tile_, tile % tiles_w_ * tile_};
   }
 
-  void transform_input(const KernelCall& call, std::int64_t tile, float* out) const {
+  // Input channels of one group.
+  void transform_input(const KernelCall& call, std::int64_t tile, std::int64_t group,
+                       float* out) const {
     const Place at = place(tile);
-    const float* image = call.inputs[0].data + at.n * g_.h * g_.w * g_.c;
+    const float* image = call.inputs[0].data + at.n * g_.h * g_.w * g_.c + group * g_.group_in();
     const float* pixels[36];
     const float** pixel = pixels;
     for (std::int64_t u = 0; u < side_; ++u) {
@@ -134,20 +140,20 @@ class WinogradKernel final : public Kernel {
         *pixel++ = inside ? image + (y * g_.w + x) * g_.c : zeros_.data();
       }
     }
-    simd::winograd_input(tile_, {pixels, g_.c, out, input_stride_});
+    simd::winograd_input(tile_, {pixels, g_.group_in(), out, input_stride_});
   }
 
-  void multiply(std::int64_t group, std::int64_t position, std::int64_t tiles, const float* input,
+  void multiply(std::int64_t part, std::int64_t position, std::int64_t tiles, const float* input,
                 float* sums, const float* next) const {
     simd::MatrixCall product;
     product.a = input + position * input_stride_;
-    product.a_stride = g_.c;
-    product.depth = g_.c;
+    product.a_stride = g_.group_in();
+    product.depth = g_.group_in();
     product.rows = tiles;
-    product.panels = weights_.at(group, position);
+    product.panels = weights_.at(part, position);
     product.next_panels = next;
     product.bias = zeros_.data();
-    product.cols = weights_.columns(group);
+    product.cols = weights_.columns(part);
     product.c = sums + position * sums_stride_;
     product.c_stride = sum_columns_;
     simd::matrix_product(product);
@@ -193,18 +199,20 @@ class WinogradKernel final : public Kernel {
 // What a layer costs, in multiply-adds that take as long. Constants as measured on Zen 3 with AVX2
 // (kernels_bench); a wrong one costs time, never more rounding than rounding_growth() says.
 double direct_cost(const Conv2dGeometry& g) {
-  return 9.0 * static_cast<double>(g.n * g.out_h * g.out_w * g.c * g.out_c);
+  return 9.0 * static_cast<double>(g.n * g.out_h * g.out_w * g.c * g.group_out());
 }
 
 double winograd_cost(const Conv2dGeometry& g, int tile) {
   constexpr double kFewestRows = 6.0;  // a product of fewer rows takes as long
   constexpr double kWeightByte = 2.5;  // transformed weights come from memory, each once
+  constexpr double kProduct = 3000.0;  // to begin one, and its ragged edges
   const double transform = tile == 2 ? 150.0 : 390.0;  // of a tile of one channel
   const double positions = (tile + 2) * (tile + 2);
-  const auto weights = static_cast<double>(g.c * g.out_c);
+  const auto weights = static_cast<double>(g.c * g.group_out());
   const auto tiles =
       static_cast<double>(g.n * ((g.out_h + tile - 1) / tile) * ((g.out_w + tile - 1) / tile));
-  const double products = positions * std::max(kFewestRows, tiles) * weights;
+  const double products = positions * std::max(kFewestRows, tiles) * weights +
+                          positions * static_cast<double>(g.groups) * kProduct;
   return std::max(products, kWeightByte * positions * weights * sizeof(float)) +
          transform * tiles * static_cast<double>(g.c + g.out_c);
 }
@@ -219,8 +227,7 @@ class WinogradStrategy final : public Strategy {
     if (g.kernel_h != 3 || g.kernel_w != 3) return "the kernel is not 3x3";
     if (g.stride_h != 1 || g.stride_w != 1) return "the stride is not 1";
     if (g.dilation_h != 1 || g.dilation_w != 1) return "dilated";
-    if (g.groups != 1) return std::to_string(g.groups) + " groups";
-    if (std::min(g.c, g.out_c) < simd::kMinWinogradChannels) return "few channels";
+    if (std::min(g.group_in(), g.group_out()) < simd::kMinWinogradChannels) return "few channels";
     if (winograd_cost(g, tile_) >= direct_cost(g)) return "direct sums take less time";
     const int other = 6 - tile_;
     if (winograd_cost(g, other) < winograd_cost(g, tile_)) {

@@ -37,28 +37,30 @@ void transform_filters(const std::array<Lanes, 9>& filters, float* out, std::int
 }  // namespace
 
 WinogradWeights::WinogradWeights(const OpContext& context, int tile)
-    : channels_(context.inputs[0][1]),
-      out_c_(context.output[1]),
-      panels_(simd::panel_count(out_c_)),
-      groups_((panels_ + kGroupPanels - 1) / kGroupPanels),
+    : groups_(context.attributes.integer("groups")),
+      depth_(context.inputs[0][1] / groups_),
+      group_out_(context.output[1] / groups_),
+      group_panels_(simd::panel_count(group_out_)),
+      cuts_((group_panels_ + kPartPanels - 1) / kPartPanels),
       positions_((tile + 2) * (tile + 2)),
-      packed_(panels_ * positions_ * panel_floats()),
-      bias_(out_columns()) {
+      packed_(groups_ * group_panels_ * positions_ * panel_floats()),
+      bias_(context.output[1]) {
   if (const Tensor* bias = context.weight("bias")) {
-    std::copy_n(bias->data(), out_c_, bias_.data());
+    std::copy_n(bias->data(), context.output[1], bias_.data());
   }
   const float* weight = context.weight("weight")->data();
-  parallel_for(available_cpus(), panels_, [&](std::int64_t panel, int) {
-    std::int64_t group = 0;
-    while (first_panel(group + 1) <= panel) ++group;
-    const std::int64_t panels = first_panel(group + 1) - first_panel(group);
-    const std::int64_t first = panel * simd::kPanel;
-    const std::int64_t valid = std::min(simd::kPanel, out_c_ - first);
-    float* to = packed_.data() + offset(group, 0) + (panel - first_panel(group)) * panel_floats();
+  parallel_for(available_cpus(), groups_ * group_panels_, [&](std::int64_t panel, int) {
+    std::int64_t part = panel / group_panels_ * cuts_;
+    while (first_panel(part + 1) <= panel) ++part;
+    const std::int64_t panels = first_panel(part + 1) - first_panel(part);
+    const std::int64_t in_group = panel % group_panels_ * simd::kPanel;
+    const std::int64_t first = panel / group_panels_ * group_out_ + in_group;
+    const std::int64_t valid = std::min(simd::kPanel, group_out_ - in_group);
+    float* to = packed_.data() + offset(part, 0) + (panel - first_panel(part)) * panel_floats();
     std::array<Lanes, 9> filters{};
-    for (std::int64_t c = 0; c < channels_; ++c, to += simd::kPanel) {
+    for (std::int64_t c = 0; c < depth_; ++c, to += simd::kPanel) {
       for (std::int64_t o = 0; o < valid; ++o) {
-        const float* filter = weight + ((first + o) * channels_ + c) * 9;
+        const float* filter = weight + ((first + o) * depth_ + c) * 9;
         for (std::size_t tap = 0; tap < 9; ++tap) {
           filters[tap][static_cast<std::size_t>(o)] = static_cast<double>(filter[tap]);
         }

@@ -37,23 +37,28 @@ constexpr int kPanelVectors = static_cast<int>(kPanel) / kLanes;
 
 // The register tile: rows x vectors accumulators, one row of b and one value of a beside them.
 // Where few rows are left, more columns keep the multipliers busy.
+// Three vectors that end a product are one tile of kRowsOfThree rows, where that is not 0.
 #if HWY_TARGET == HWY_AVX3  // 32 registers of 16
 constexpr int kMaxRows = 14;
+constexpr int kRowsOfThree = 0;
 constexpr int wide(int rows) {
   return rows <= 3 ? 4 : 2;
 }
 #elif HWY_TARGET == HWY_AVX2  // 16 of 8
 constexpr int kMaxRows = 6;
+constexpr int kRowsOfThree = 4;
 constexpr int wide(int rows) {
   return rows == 1 ? 8 : rows == 2 ? 4 : 2;
 }
 #elif HWY_TARGET == HWY_NEON  // 32 of 4
 constexpr int kMaxRows = 6;
+constexpr int kRowsOfThree = 0;
 constexpr int wide(int rows) {
   return rows <= 2 ? 8 : 4;
 }
 #else                         // 16 of 4, or none at all
 constexpr int kMaxRows = 4;
+constexpr int kRowsOfThree = 0;
 constexpr int wide(int rows) {
   return rows == 1 ? 4 : 2;
 }
@@ -182,19 +187,26 @@ void run_tile(const Tile& t) {
 
 using RunTile = void (*)(const Tile&);
 
-// By log2 of the vectors; null where the tile would not fit in registers.
+// Tiles of 1, 2, 4, 8 and 3 vectors.
+constexpr std::size_t kWidths = 5;
+constexpr std::size_t slot(std::int64_t vectors) {
+  return vectors == 3 ? 4 : vectors == 8 ? 3 : static_cast<std::size_t>(vectors / 2);
+}
+
+// By slot(); null where the tile would not fit in registers.
 template <int kRows>
-constexpr std::array<RunTile, 4> tiles_of_rows() {
-  std::array<RunTile, 4> tiles{};
-  tiles[0] = run_tile<kRows, 1>;
-  tiles[1] = run_tile<kRows, 2>;
-  if constexpr (wide(kRows) >= 4) tiles[2] = run_tile<kRows, 4>;
-  if constexpr (wide(kRows) >= 8) tiles[3] = run_tile<kRows, 8>;
+constexpr std::array<RunTile, kWidths> tiles_of_rows() {
+  std::array<RunTile, kWidths> tiles{};
+  tiles[slot(1)] = run_tile<kRows, 1>;
+  tiles[slot(2)] = run_tile<kRows, 2>;
+  if constexpr (wide(kRows) >= 4) tiles[slot(4)] = run_tile<kRows, 4>;
+  if constexpr (wide(kRows) >= 8) tiles[slot(8)] = run_tile<kRows, 8>;
+  if constexpr (kRows <= kRowsOfThree) tiles[slot(3)] = run_tile<kRows, 3>;
   return tiles;
 }
 
 template <int... kIndex>
-constexpr std::array<std::array<RunTile, 4>, sizeof...(kIndex)> all_tiles(
+constexpr std::array<std::array<RunTile, kWidths>, sizeof...(kIndex)> all_tiles(
     std::integer_sequence<int, kIndex...>) {
   return {tiles_of_rows<kIndex + 1>()...};
 }
@@ -208,8 +220,9 @@ void matrix_product(const MatrixCall& call) {
   constexpr float kInfinity = std::numeric_limits<float>::infinity();
   const std::int64_t depth = call.taps * call.depth;
   const std::int64_t panel_stride = depth * kPanel;
-  const std::int64_t row_tiles = (call.rows + kMaxRows - 1) / kMaxRows;
-  const int tallest = static_cast<int>((call.rows + row_tiles - 1) / row_tiles);
+  const auto row_tiles_of = [&](std::int64_t most) { return (call.rows + most - 1) / most; };
+  const std::int64_t most_tiles = row_tiles_of(kMaxRows);
+  const int tallest = static_cast<int>((call.rows + most_tiles - 1) / most_tiles);
   const std::int64_t vectors = (call.cols + kLanes - 1) / kLanes;
 
   Tile tile{.table = nullptr,
@@ -233,11 +246,10 @@ void matrix_product(const MatrixCall& call) {
   std::int64_t width = 0;
   for (std::int64_t first = 0; first < vectors; first += width) {
     width = wide(tallest);
-    int shift = width == 8 ? 3 : width == 4 ? 2 : 1;
-    while (width > vectors - first) {
-      width /= 2;
-      --shift;
-    }
+    while (width > vectors - first) width /= 2;
+    const bool three = kRowsOfThree > 0 && width == 2 && vectors - first == 3;
+    if (three) width = 3;
+    const std::int64_t row_tiles = three ? row_tiles_of(kRowsOfThree) : most_tiles;
     const std::int64_t column = first * kLanes;
     tile.b = call.panels + column / kPanel * panel_stride + column % kPanel;
     tile.bias = call.bias + column;
@@ -250,7 +262,8 @@ void matrix_product(const MatrixCall& call) {
     const std::int64_t blocks = row_tiles * call.taps * (call.depth / kUnroll);
     const std::int64_t ahead_bytes =
         width * kLanes * depth * static_cast<std::int64_t>(sizeof(float));
-    const bool fetches = ahead != nullptr && blocks > 0 && next % kPanel == 0;
+    const bool whole = next >= call.cols || next % kPanel == 0;
+    const bool fetches = ahead != nullptr && blocks > 0 && whole;
     tile.prefetch_step = fetches ? (ahead_bytes + blocks - 1) / blocks : 0;
 
     for (std::int64_t i = 0; i < row_tiles; ++i) {
@@ -271,7 +284,7 @@ void matrix_product(const MatrixCall& call) {
           call.residual == nullptr ? nullptr : call.residual + row * call.c_stride + column;
       tile.prefetch = reinterpret_cast<const char*>(ahead) +
                       i * call.taps * (call.depth / kUnroll) * tile.prefetch_step;
-      kTiles[rows - 1][static_cast<std::size_t>(shift)](tile);
+      kTiles[rows - 1][slot(width)](tile);
       if (activate != nullptr) {
         const auto count = static_cast<std::int64_t>(rows);
         activate({stage, 0, stage, 0, 1, count * tile.c_stride, call.activation.parameter});

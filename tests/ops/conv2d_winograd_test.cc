@@ -72,10 +72,14 @@ TEST(Winograd, AgreesWithTheReferenceOnRandomShapes) {
   constexpr std::array<std::int64_t, 9> kChannels = {16, 16, 17, 24, 31, 33, 40, 48, 130};
   Random random(40);
   std::map<std::string, int> taken;
-  for (int i = 0; i < 60; ++i) {
-    Geometry g = same_3x3(random.pick(kChannels), random.pick(kChannels), random.integer(2, 22),
-                          random.integer(2, 22));
+  for (int i = 0; i < 80; ++i) {
+    const std::int64_t largest = random.coin() ? 22 : 9;  // small images: tiles of 2x2
+    Geometry g = same_3x3(random.pick(kChannels), random.pick(kChannels),
+                          random.integer(3, largest), random.integer(3, largest));
     g.n = random.integer(1, 2);
+    g.groups = random.coin() ? 1 : random.integer(2, 5);
+    g.c *= g.groups;
+    g.out_c *= g.groups;
     for (auto& side : g.padding) side = random.integer(0, 3);
     OpCase c = conv_case(random, g, random.coin());
     add_random_epilogue(random, c);
@@ -90,11 +94,18 @@ TEST(Winograd, AgreesWithTheReferenceOnRandomShapes) {
   EXPECT_GE(taken["winograd4"], 20);
 }
 
-// Few tiles and many, one group of panels and several.
+// Few tiles and many; one part, several, and several of several groups.
 TEST(Winograd, AgreesWithTheReferenceOnUsualShapes) {
   Random random(41);
+  const auto grouped = [](Geometry g, std::int64_t groups) {
+    g.groups = groups;
+    return g;
+  };
   for (const auto& [g, strategy] :
        {std::pair<Geometry, std::string>{same_3x3(32, 48, 40, 36), "winograd4"},
+        {grouped(same_3x3(72, 72, 28, 28), 3), "winograd4"},
+        {grouped(same_3x3(64, 300, 26, 25), 2), "winograd4"},
+        {grouped(same_3x3(64, 580, 14, 13), 2), "winograd4"},
         {same_3x3(20, 290, 33, 35), "winograd4"},
         {same_3x3(64, 64, 14, 14), "winograd4"},
         {same_3x3(40, 272, 14, 13), "winograd4"},
@@ -177,7 +188,8 @@ TEST(Winograd, RefusesWhatItCannotOrShouldNotDo) {
   EXPECT_TRUE(changed([](Geometry& g) { g.dilation = {2, 1}; }));
   EXPECT_TRUE(changed([](Geometry& g) { g.kernel = {3, 1}; }));
   EXPECT_TRUE(changed([](Geometry& g) { g.kernel = {5, 5}; }));
-  EXPECT_TRUE(changed([](Geometry& g) { g.groups = 2; }));
+  EXPECT_FALSE(changed([](Geometry& g) { g.groups = 2; }));
+  EXPECT_TRUE(changed([](Geometry& g) { g.groups = 4; }));  // of 8 channels
   EXPECT_TRUE(changed([](Geometry& g) { g.c = 3; }));
   EXPECT_TRUE(changed([](Geometry& g) { g.out_c = 15; }));
   EXPECT_TRUE(changed([](Geometry& g) { g.h = g.w = 1; }));
