@@ -8,6 +8,7 @@
 #include "engine/plan_state.h"
 #include "leadsman/error.h"
 #include "leadsman/names.h"
+#include "ops/memory_order.h"
 
 namespace leadsman {
 namespace {
@@ -123,7 +124,7 @@ void Runner::run(std::span<const Tensor> inputs) {
       throw_usage("input '" + p.input_names[i] + "' has shape " + inputs[i].shape().to_string() +
                   ", the plan was made for " + p.input_shapes[i].to_string());
     }
-    copy_from_logical(inputs[i].data(), s.values[i]);
+    ops::to_memory_order(inputs[i].data(), s.values[i], p.options.threads);
   }
   Clock::duration parts{0};
   if (s.profiling) record(s.profile.input, parts = Clock::now() - begin);

@@ -2,33 +2,57 @@
 
 #include "leadsman/error.h"
 #include "ops/rows.h"
+#include "ops/simd/interleave.h"
+#include "ops/simd/target.h"
 #include "ops/strategy_of.h"
 
 namespace leadsman::ops {
 namespace {
 
-class ReferenceKernel final : public Kernel {
+// A position's channels: in_group of each group, then in turns.
+using Interleave = void (*)(const float* in, std::int64_t stride, std::int64_t rows,
+                            std::int64_t length, float* out);
+
+void interleave_plainly(const float* in, std::int64_t stride, std::int64_t rows,
+                        std::int64_t length, float* out) {
+  for (std::int64_t i = 0; i < rows; ++i) {
+    for (std::int64_t j = 0; j < length; ++j) out[j * rows + i] = in[i * stride + j];
+  }
+}
+
+class ShuffleKernel : public Kernel {
  public:
-  explicit ReferenceKernel(const OpContext& context)
+  ShuffleKernel(const OpContext& context, Interleave interleave)
       : rows_(position_count(context.output)),
         groups_(context.attributes.integer("groups")),
-        in_group_(context.output[1] / groups_) {}
+        in_group_(context.output[1] / groups_),
+        interleave_(interleave) {}
 
   void run(const KernelCall& call) const override {
     const std::int64_t channels = groups_ * in_group_;
     parallel_rows(call.threads, rows_, channels, [&](std::int64_t begin, std::int64_t end) {
       for (std::int64_t row = begin; row < end; ++row) {
-        const float* x = call.inputs[0].data + row * channels;
-        float* y = call.output.data + row * channels;
-        for (std::int64_t i = 0; i < groups_; ++i) {
-          for (std::int64_t j = 0; j < in_group_; ++j) y[j * groups_ + i] = x[i * in_group_ + j];
-        }
+        interleave_(call.inputs[0].data + row * channels, in_group_, groups_, in_group_,
+                    call.output.data + row * channels);
       }
     });
   }
 
  private:
   std::int64_t rows_, groups_, in_group_;
+  Interleave interleave_;
+};
+
+class RowsKernel final : public ShuffleKernel {
+ public:
+  explicit RowsKernel(const OpContext& context) : ShuffleKernel(context, simd::interleave) {
+    simd::choose_target();
+  }
+};
+
+class ReferenceKernel final : public ShuffleKernel {
+ public:
+  explicit ReferenceKernel(const OpContext& context) : ShuffleKernel(context, interleave_plainly) {}
 };
 
 class ChannelShuffle final : public Operator {
@@ -65,7 +89,7 @@ class ChannelShuffle final : public Operator {
   Cost cost(const OpContext& /*context*/) const override { return {}; }
 
   std::span<const Strategy* const> strategies() const override {
-    return only_reference<ReferenceKernel>();
+    return rows_and_reference<RowsKernel, ReferenceKernel>();
   }
 };
 

@@ -4,10 +4,12 @@
 #include <gtest/gtest.h>
 
 #include "leadsman/error.h"
+#include "ops/memory_order.h"
 #include "tests/support/compare.h"
 #include "tests/support/fast_against_reference.h"
 #include "tests/support/op_runner.h"
 #include "tests/support/random.h"
+#include "tests/support/targets.h"
 
 namespace leadsman::testing {
 namespace {
@@ -54,6 +56,41 @@ TEST(ChannelShuffle, OfTheGroupsSizeUndoesIt) {
   c.inputs[0] = run_op(c, "reference");
   c.attributes.set("groups", std::int64_t{4});
   expect_same_bits(run_op(c, "reference"), x);
+}
+
+TEST(ChannelShuffle, AgreesWithTheReferenceOnEveryInstructionSet) {
+  Random random(76);
+  for (int i = 0; i < 40; ++i) {
+    const std::int64_t groups = random.integer(1, 6);
+    OpCase c{.op = "channel_shuffle",
+             .inputs = {random.tensor({random.integer(1, 2), groups * random.integer(1, 70),
+                                       random.integer(1, 9), random.integer(1, 9)})}};
+    c.attributes.set("groups", groups);
+    const Tensor expected = run_op(c, "reference");
+    on_every_target([&] {
+      for (const int threads : {1, 3}) {
+        expect_same_bits(run_op(c, "rows", {.threads = threads}), expected);
+      }
+    });
+  }
+}
+
+TEST(MemoryOrder, OfInputsIsThatOfTheCore) {
+  Random random(77);
+  for (int i = 0; i < 60; ++i) {
+    const Tensor x = i % 5 == 0 ? random.tensor({2, 7, 5})
+                                : random.tensor({random.integer(1, 3), random.integer(1, 6),
+                                                 random.integer(1, 90), random.integer(1, 90)});
+    Tensor expected(x.shape());
+    copy_from_logical(x.data(), {expected.mutable_data(), x.shape()});
+    on_every_target([&] {
+      for (const int threads : {1, 3}) {
+        Tensor y(x.shape());
+        ops::to_memory_order(x.data(), {y.mutable_data(), x.shape()}, threads);
+        expect_same_bits(y, expected);
+      }
+    });
+  }
 }
 
 TEST(TokensToImage, UndoesImageToTokens) {
