@@ -43,8 +43,8 @@ std::int64_t AttentionPlan::packed_value_floats() const {
 }
 
 std::int64_t AttentionPlan::scratch_floats() const {
-  // Scaled queries, scores, sums of the output, largest score and sum of each row.
-  return block_rows_ * (padded(d_) + padded(key_block_) + padded(d_) + 2) + kPanel;
+  // Scores, sums of the output; largest score, sum, and sum of a block of each row.
+  return block_rows_ * (padded(key_block_) + padded(d_) + 3) + kPanel;
 }
 
 std::int64_t AttentionPlan::zero_floats() const {
@@ -94,35 +94,36 @@ void AttentionPlan::scale_queries(std::int64_t block, HeadRows queries, float fa
   }
 }
 
-// To `count` scores of query `row` with the keys from `begin` on.
-void AttentionPlan::add_terms(std::int64_t row, std::int64_t begin, std::int64_t count,
-                              ScoreTerms terms, float* scores) const {
+// To the scores of query `row`.
+void AttentionPlan::add_terms(std::int64_t row, ScoreTerms terms, float* scores) const {
   for (const float* term : {terms.bias, terms.mask}) {
     if (term == nullptr) continue;
-    term += row * keys_ + begin;
-    for (std::int64_t i = 0; i < count; ++i) scores[i] += term[i];
+    term += row * keys_;
+    for (std::int64_t i = 0; i < keys_; ++i) scores[i] += term[i];
   }
 }
 
 void AttentionPlan::attend_block(std::int64_t block, HeadRows queries, const float* packed_keys,
                                  const float* packed_values, ScoreTerms terms, const float* zeros,
                                  float* scratch, HeadOutput out) const {
-  const std::int64_t rows = first_row(block + 1) - first_row(block);
+  const std::int64_t first = first_row(block);
+  const std::int64_t rows = first_row(block + 1) - first;
   const std::int64_t score_stride = padded(key_block_);
   float* scores = scratch;
-  float* scaled = scores + block_rows_ * score_stride;
-  float* sums = scaled + block_rows_ * padded(d_);
+  float* sums = scores + block_rows_ * score_stride;
   float* largest = sums + block_rows_ * padded(d_);
   float* total = largest + block_rows_;
-  scale_queries(block, queries, terms.factor, scaled);
+  float* block_total = total + block_rows_;
+  std::array<const float*, kMaxRows> query_rows;
+  for (std::int64_t row = 0; row < rows; ++row) {
+    query_rows[static_cast<std::size_t>(row)] = queries.row(first + row);
+  }
   std::fill_n(largest, rows, -std::numeric_limits<float>::infinity());
-  std::fill_n(total, rows, 0.0F);
 
   for (std::int64_t begin = 0; begin < keys_; begin += key_block_) {
     const std::int64_t count = std::min(key_block_, keys_ - begin);
     MatrixCall product;
-    product.a = scaled;
-    product.a_stride = d_;
+    product.table = query_rows.data();
     product.depth = d_;
     product.rows = rows;
     product.panels = packed_keys + begin * d_;
@@ -132,20 +133,27 @@ void AttentionPlan::attend_block(std::int64_t block, HeadRows queries, const flo
     product.c_stride = score_stride;
     matrix_product(product);
 
-    for (std::int64_t row = 0; row < rows; ++row) {
-      const float before = largest[row];
-      float* row_scores = scores + row * score_stride;
-      add_terms(first_row(block) + row, begin, count, terms, row_scores);
-      const float sum = exponentiate_row(row_scores, count, largest[row]);
-      if (begin == 0) {
-        total[row] = sum;
-        continue;
-      }
-      const float correction = std::exp(before - largest[row]);
-      total[row] = total[row] * correction + sum;
+    // The sums so far are relative to a largest score that may have been exceeded.
+    std::array<float, kMaxRows> before;
+    std::copy_n(largest, rows, before.begin());
+    const std::int64_t term = first * keys_ + begin;
+    exponentiate_rows({.scores = scores,
+                       .stride = score_stride,
+                       .rows = rows,
+                       .count = count,
+                       .factor = terms.factor,
+                       .bias = terms.bias == nullptr ? nullptr : terms.bias + term,
+                       .mask = terms.mask == nullptr ? nullptr : terms.mask + term,
+                       .term_stride = keys_,
+                       .largest = largest,
+                       .sums = begin == 0 ? total : block_total});
+    for (std::int64_t row = 0; begin > 0 && row < rows; ++row) {
+      const float correction = std::exp(before[static_cast<std::size_t>(row)] - largest[row]);
+      total[row] = total[row] * correction + block_total[row];
       if (correction != 1.0F) scale_row(sums + row * d_, d_, correction);
     }
 
+    product.table = nullptr;
     product.a = scores;
     product.a_stride = score_stride;
     product.depth = count;
@@ -157,7 +165,7 @@ void AttentionPlan::attend_block(std::int64_t block, HeadRows queries, const flo
     matrix_product(product);
   }
   for (std::int64_t row = 0; row < rows; ++row) {
-    scale_row(sums + row * d_, out.row(first_row(block) + row), d_, 1.0F / total[row]);
+    scale_row(sums + row * d_, out.row(first + row), d_, 1.0F / total[row]);
   }
 }
 
@@ -178,7 +186,7 @@ void AttentionPlan::weights_block(std::int64_t block, HeadRows queries, const fl
   product.c_stride = keys_;
   matrix_product(product);
   for (std::int64_t row = 0; row < rows; ++row) {
-    add_terms(first_row(block) + row, 0, keys_, terms, weights + row * keys_);
+    add_terms(first_row(block) + row, terms, weights + row * keys_);
     softmax_row(weights + row * keys_, weights + row * keys_, keys_);
   }
 }

@@ -70,8 +70,7 @@ class AttentionPlan {
 
  private:
   void scale_queries(std::int64_t block, HeadRows queries, float factor, float* scaled) const;
-  void add_terms(std::int64_t row, std::int64_t begin, std::int64_t count, ScoreTerms terms,
-                 float* scores) const;
+  void add_terms(std::int64_t row, ScoreTerms terms, float* scores) const;
 
   std::int64_t queries_;
   std::int64_t keys_;

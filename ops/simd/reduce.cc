@@ -138,11 +138,48 @@ void scale(const float* in, float* out, std::int64_t count, float factor) {
   for (; i < count; ++i) out[i] = in[i] * factor;
 }
 
-float exponentiate_row(float* scores, std::int64_t count, float& largest) {
-  largest = std::max(largest, largest_of(scores, count));
-  const std::int64_t whole = (count + kLanes - 1) / kLanes * kLanes;
-  for (std::int64_t i = count; i < whole; ++i) scores[i] = largest;
-  return exponentials(scores, scores, count, largest);
+// scores = factor * scores + bias + mask; returns the largest. Terms that are not there: null.
+HWY_INLINE float finish_scores(float* scores, std::int64_t count, float factor, const float* bias,
+                               const float* mask) {
+  const D d;
+  const V by = hn::Set(d, factor);
+  V largest = hn::Set(d, -std::numeric_limits<float>::infinity());
+  std::int64_t i = 0;
+  for (; i + kLanes <= count; i += kLanes) {
+    V s = hn::LoadU(d, scores + i);
+    s = bias == nullptr ? hn::Mul(s, by) : hn::MulAdd(s, by, hn::LoadU(d, bias + i));
+    if (mask != nullptr) s = hn::Add(s, hn::LoadU(d, mask + i));
+    hn::StoreU(s, d, scores + i);
+    largest = hn::Max(largest, s);
+  }
+  HWY_ALIGN float lanes[kLanes];
+  hn::Store(largest, d, lanes);
+  for (std::int64_t half = kLanes / 2; half > 0; half /= 2) {
+    for (std::int64_t k = 0; k < half; ++k) lanes[k] = std::max(lanes[k], lanes[k + half]);
+  }
+  for (; i < count; ++i) {
+    float s = scores[i] * factor;
+    if (bias != nullptr) s += bias[i];
+    if (mask != nullptr) s += mask[i];
+    scores[i] = s;
+    lanes[0] = std::max(lanes[0], s);
+  }
+  return lanes[0];
+}
+
+void exponentiate_rows(const ScoreRows& call) {
+  const std::int64_t whole = (call.count + kLanes - 1) / kLanes * kLanes;
+  for (std::int64_t r = 0; r < call.rows; ++r) {
+    float* scores = call.scores + r * call.stride;
+    const std::int64_t term = r * call.term_stride;
+    const float largest =
+        std::max(call.largest[r], finish_scores(scores, call.count, call.factor,
+                                                call.bias ? call.bias + term : nullptr,
+                                                call.mask ? call.mask + term : nullptr));
+    for (std::int64_t i = call.count; i < whole; ++i) scores[i] = largest;
+    call.largest[r] = largest;
+    call.sums[r] = exponentials(scores, scores, call.count, largest);
+  }
 }
 
 void softmax_row(const float* in, float* out, std::int64_t count) {
@@ -188,7 +225,7 @@ namespace leadsman::ops::simd {
 
 HWY_EXPORT(layer_norm_row);
 HWY_EXPORT(softmax_row);
-HWY_EXPORT(exponentiate_row);
+HWY_EXPORT(exponentiate_rows);
 HWY_EXPORT(scale);
 HWY_EXPORT(column_means);
 
@@ -201,8 +238,8 @@ void softmax_row(const float* in, float* out, std::int64_t count) {
   HWY_DYNAMIC_DISPATCH(softmax_row)(in, out, count);
 }
 
-float exponentiate_row(float* scores, std::int64_t count, float& largest) {
-  return HWY_DYNAMIC_DISPATCH(exponentiate_row)(scores, count, largest);
+void exponentiate_rows(const ScoreRows& call) {
+  HWY_DYNAMIC_DISPATCH(exponentiate_rows)(call);
 }
 
 void scale_row(float* values, std::int64_t count, float factor) {

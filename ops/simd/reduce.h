@@ -16,10 +16,25 @@ void layer_norm_row(const float* in, const float* weight, const float* bias, flo
 /// the same. A NaN makes the whole row NaN.
 void softmax_row(const float* in, float* out, std::int64_t count);
 
-/// One block of an online softmax (Milakov & Gimelshein 2018): raises `largest` to the largest of
-/// the scores, replaces each by exp(score - largest), and returns their sum. Requires room behind
-/// the scores up to a multiple of 16 floats; what stands there is overwritten.
-float exponentiate_row(float* scores, std::int64_t count, float& largest);
+/// Rows of scores on their way to a softmax.
+struct ScoreRows {
+  float* scores = nullptr;  ///< row r at scores + r * stride
+  std::int64_t stride = 0;
+  std::int64_t rows = 0;
+  std::int64_t count = 0;  ///< scores of a row
+  float factor = 1.0F;
+  const float* bias = nullptr;  ///< row r at bias + r * term_stride; null: none
+  const float* mask = nullptr;  ///< the same
+  std::int64_t term_stride = 0;
+  float* largest = nullptr;  ///< of each row
+  float* sums = nullptr;     ///< of each row
+};
+
+/// One block of an online softmax (Milakov & Gimelshein 2018), for each row: s = factor * score +
+/// bias + mask; raises `largest` to the largest s, replaces the scores by exp(s - largest), and
+/// sets `sums` to their sum. Requires a stride of at least `count` rounded up to a multiple of 16;
+/// what stands behind the scores is overwritten.
+void exponentiate_rows(const ScoreRows& call);
 
 /// values *= factor.
 void scale_row(float* values, std::int64_t count, float factor);
