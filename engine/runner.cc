@@ -2,8 +2,8 @@
 
 #include <algorithm>
 #include <chrono>
-#include <new>
 
+#include "core/memory.h"
 #include "core/threads.h"
 #include "engine/plan_state.h"
 #include "leadsman/error.h"
@@ -13,16 +13,13 @@
 namespace leadsman {
 namespace {
 
-constexpr std::align_val_t kAlignment{64};
-
-struct AlignedDelete {
-  void operator()(std::byte* bytes) const { ::operator delete(bytes, kAlignment); }
+struct FreeBlock {
+  void operator()(std::byte* bytes) const { internal::free_block(bytes); }
 };
-using AlignedBytes = std::unique_ptr<std::byte, AlignedDelete>;
+using AlignedBytes = std::unique_ptr<std::byte, FreeBlock>;
 
 AlignedBytes allocate(std::size_t bytes, const char* what) {
-  auto* memory = static_cast<std::byte*>(
-      ::operator new(std::max<std::size_t>(bytes, 64), kAlignment, std::nothrow));
+  auto* memory = static_cast<std::byte*>(internal::allocate_block(bytes));
   if (memory == nullptr) {
     throw Error(ErrorKind::kMemory, std::string("not enough memory for the ") + what + ": " +
                                         std::to_string(bytes) + " bytes");

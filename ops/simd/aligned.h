@@ -1,10 +1,13 @@
 // Floats aligned to 64 bytes (a cache line, and the longest vector).
 #pragma once
 
+#include <algorithm>
 #include <cstddef>
 #include <cstdint>
 #include <memory>
 #include <new>
+
+#include "core/memory.h"
 
 namespace leadsman::ops::simd {
 
@@ -24,9 +27,9 @@ class AlignedFloats {
   AlignedFloats() = default;
   explicit AlignedFloats(std::int64_t count)
       : count_(count),
-        data_(static_cast<float*>(
-            ::operator new (aligned_floats_bytes(count), std::align_val_t{kAlignment}))) {
-    for (std::int64_t i = 0; i < count; ++i) data_.get()[i] = 0.0F;
+        data_(static_cast<float*>(internal::allocate_block(aligned_floats_bytes(count)))) {
+    if (data_ == nullptr) throw std::bad_alloc();
+    std::fill_n(data_.get(), count, 0.0F);
   }
   float* data() { return data_.get(); }
   const float* data() const { return data_.get(); }
@@ -35,7 +38,7 @@ class AlignedFloats {
 
  private:
   struct Free {
-    void operator()(float* data) const { ::operator delete (data, std::align_val_t{kAlignment}); }
+    void operator()(float* data) const { internal::free_block(data); }
   };
   std::int64_t count_ = 0;
   std::unique_ptr<float, Free> data_;
