@@ -1,15 +1,20 @@
 // y = (x - mean) * scale + bias over rows of channels, in float. The mean is not merged into the
 // bias: where it is large beside the deviation, the difference would cancel.
 #include <cmath>
+#include <limits>
 
 #include "ops/batch_norm/batch_norm.h"
 #include "ops/rows.h"
 #include "ops/simd/activation.h"
+#include "ops/simd/channelwise.h"
 #include "ops/simd/target.h"
 #include "ops/strategy_of.h"
 
 namespace leadsman::ops {
 namespace {
+
+constexpr float kInfinity = std::numeric_limits<float>::infinity();
+constexpr simd::Bounds kUnbounded{-kInfinity, kInfinity};
 
 class RowsKernel final : public Kernel {
  public:
@@ -19,7 +24,8 @@ class RowsKernel final : public Kernel {
         mean_(*context.weight("mean")),
         scale_(Shape{channels_}),
         bias_(context.weight("bias") ? *context.weight("bias") : Tensor(Shape{channels_})),
-        epilogue_(epilogue) {
+        epilogue_(epilogue),
+        bounds_(simd::activation_bounds(epilogue.activation).value_or(kUnbounded)) {
     simd::choose_target();
     const Tensor* weight = context.weight("weight");
     const Tensor& variance = *context.weight("variance");
@@ -38,45 +44,27 @@ class RowsKernel final : public Kernel {
   bool runs_in_place() const override { return true; }
 
   void run(const KernelCall& call) const override {
+    const simd::Normalise by{mean_.data(), scale_.data(), bias_.data(), bounds_.low, bounds_.high};
     parallel_rows(call.threads, rows_, channels_, [&](std::int64_t begin, std::int64_t end) {
-      for (std::int64_t row = begin; row < end; ++row) {
-        const float* x = call.inputs[0].data + row * channels_;
-        float* y = call.output.data + row * channels_;
-        if (epilogue_.has_residual) {
-          normalise(x, call.residual + row * channels_, y);
-        } else {
-          normalise(x, y);
-        }
+      for (std::int64_t at = begin * channels_; at < end * channels_; at += channels_) {
+        simd::normalise_row(by, call.inputs[0].data + at,
+                            epilogue_.has_residual ? call.residual + at : nullptr,
+                            call.output.data + at, channels_);
       }
-      if (epilogue_.activation.kind == ActivationKind::kNone) return;
+      if (simd::activation_bounds(epilogue_.activation)) return;
       float* block = call.output.data + begin * channels_;
       simd::activate_row(epilogue_.activation, block, block, (end - begin) * channels_);
     });
   }
 
  private:
-  void normalise(const float* x, float* y) const {
-    const float* mean = mean_.data();
-    const float* scale = scale_.data();
-    const float* bias = bias_.data();
-    for (std::int64_t c = 0; c < channels_; ++c) y[c] = (x[c] - mean[c]) * scale[c] + bias[c];
-  }
-  // One pass, because the residual may be the very input that is overwritten.
-  void normalise(const float* x, const float* residual, float* y) const {
-    const float* mean = mean_.data();
-    const float* scale = scale_.data();
-    const float* bias = bias_.data();
-    for (std::int64_t c = 0; c < channels_; ++c) {
-      y[c] = (x[c] - mean[c]) * scale[c] + bias[c] + residual[c];
-    }
-  }
-
   std::int64_t rows_;
   std::int64_t channels_;
   Tensor mean_;
   Tensor scale_;
   Tensor bias_;
   Epilogue epilogue_;
+  simd::Bounds bounds_;
 };
 
 }  // namespace

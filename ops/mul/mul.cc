@@ -5,6 +5,9 @@
 
 #include "leadsman/error.h"
 #include "ops/rows.h"
+#include "ops/simd/channelwise.h"
+#include "ops/simd/reduce.h"
+#include "ops/simd/target.h"
 #include "ops/strategy_of.h"
 
 namespace leadsman::ops {
@@ -36,10 +39,24 @@ bool takes(const Shape& full, const Shape& factors) {
   return std::ranges::find(shapes, factors) != shapes.end();
 }
 
-// A float product is the exact one rounded once: no plainer form could differ.
-class ReferenceKernel final : public Kernel {
+// How one row is multiplied: by another, and by one factor. A float product is the exact one
+// rounded once, so all forms agree.
+struct RowProducts {
+  void (*multiply)(const float* a, const float* b, float* out, std::int64_t count);
+  void (*scale)(const float* in, float* out, std::int64_t count, float factor);
+};
+
+void multiply_plainly(const float* a, const float* b, float* out, std::int64_t count) {
+  for (std::int64_t i = 0; i < count; ++i) out[i] = a[i] * b[i];
+}
+
+void scale_plainly(const float* in, float* out, std::int64_t count, float factor) {
+  for (std::int64_t i = 0; i < count; ++i) out[i] = in[i] * factor;
+}
+
+class MulKernel : public Kernel {
  public:
-  explicit ReferenceKernel(const OpContext& context) {
+  MulKernel(const OpContext& context, RowProducts products) : products_(products) {
     const Shape& full = context.inputs[0];
     const Shape& factors = context.inputs[1];
     if (full == factors) {
@@ -60,17 +77,15 @@ class ReferenceKernel final : public Kernel {
     float* y = call.output.data;
     parallel_rows(call.threads, rows_, channels_, [&](std::int64_t begin, std::int64_t end) {
       if (repeated_ == Repeated::kNot) {
-        for (std::int64_t i = begin; i < end; ++i) y[i] = a[i] * b[i];
+        products_.multiply(a + begin, b + begin, y + begin, end - begin);
         return;
       }
       for (std::int64_t row = begin; row < end; ++row) {
         const std::int64_t first = row * channels_;
         if (repeated_ == Repeated::kOverPositions) {
-          const float* factor = b + row / rows_in_item_ * channels_;
-          for (std::int64_t c = 0; c < channels_; ++c) y[first + c] = a[first + c] * factor[c];
+          products_.multiply(a + first, b + row / rows_in_item_ * channels_, y + first, channels_);
         } else {
-          const float factor = b[row];
-          for (std::int64_t c = 0; c < channels_; ++c) y[first + c] = a[first + c] * factor;
+          products_.scale(a + first, y + first, channels_, b[row]);
         }
       }
     });
@@ -79,10 +94,25 @@ class ReferenceKernel final : public Kernel {
  private:
   enum class Repeated { kNot, kOverPositions, kOverChannels };
 
+  RowProducts products_;
   Repeated repeated_ = Repeated::kNot;
   std::int64_t rows_ = 0;
   std::int64_t channels_ = 1;
   std::int64_t rows_in_item_ = 1;
+};
+
+class RowsKernel final : public MulKernel {
+ public:
+  explicit RowsKernel(const OpContext& context)
+      : MulKernel(context, {simd::multiply_row, simd::scale_row}) {
+    simd::choose_target();
+  }
+};
+
+class ReferenceKernel final : public MulKernel {
+ public:
+  explicit ReferenceKernel(const OpContext& context)
+      : MulKernel(context, {multiply_plainly, scale_plainly}) {}
 };
 
 class Mul final : public Operator {
@@ -117,7 +147,7 @@ class Mul final : public Operator {
   Cost cost(const OpContext& /*context*/) const override { return {}; }
 
   std::span<const Strategy* const> strategies() const override {
-    return only_reference<ReferenceKernel>();
+    return rows_and_reference<RowsKernel, ReferenceKernel>();
   }
 };
 

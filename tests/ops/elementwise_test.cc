@@ -5,6 +5,7 @@
 #include "tests/support/compare.h"
 #include "tests/support/op_runner.h"
 #include "tests/support/random.h"
+#include "tests/support/targets.h"
 
 namespace leadsman::testing {
 namespace {
@@ -124,9 +125,15 @@ TEST(Mul, OfFactorsIsThatOfRepeatedOnes) {
     SCOPED_TRACE(full.to_string() + " times " + small.to_string());
     const Tensor expected = run_op({.op = "mul", .inputs = {x, repeated}}, "reference");
     const OpCase product{.op = "mul", .inputs = {x, factors}};
-    for (const int threads : {1, 3}) {
-      expect_same_bits(run_op(product, "reference", {.threads = threads, .in_place = threads == 3}),
-                       expected);
+    for (const std::string& strategy : strategy_names("mul")) {
+      on_every_target([&] {
+        for (const int threads : {1, 3}) {
+          const RunOptions options{.threads = threads, .in_place = threads == 3};
+          expect_same_bits(run_op(product, strategy, options), expected);
+          expect_same_bits(run_op({.op = "mul", .inputs = {x, repeated}}, strategy, options),
+                           expected);
+        }
+      });
     }
   }
 }
