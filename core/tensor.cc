@@ -22,12 +22,18 @@ Tensor::Tensor(Shape shape, std::vector<float> values) : shape_(shape) {
   data_ = own_->data();
 }
 
-Tensor Tensor::borrow(Shape shape, const float* data, std::shared_ptr<const void> owner) {
+Tensor Tensor::borrow(Shape shape, const float* data, std::shared_ptr<const void> owner,
+                      Release release) {
   Tensor tensor;
   tensor.shape_ = shape;
   tensor.data_ = data;
   tensor.owner_ = std::move(owner);
+  tensor.release_ = release;
   return tensor;
+}
+
+void Tensor::release() const {
+  if (release_ != nullptr) release_(data_, static_cast<std::size_t>(elements()) * sizeof(float));
 }
 
 float* Tensor::mutable_data() {
@@ -35,6 +41,7 @@ float* Tensor::mutable_data() {
     const std::span<const float> old = values();
     own_ = std::make_shared<std::vector<float>>(old.begin(), old.end());
     owner_.reset();
+    release_ = nullptr;
     data_ = own_->data();
   }
   return own_->data();

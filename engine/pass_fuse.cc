@@ -56,32 +56,22 @@ class Fuser {
 
   static bool drop_identity(const Step& reader) { return reader.op->contract().name == "identity"; }
 
-  // a (W x + b) + c is again of the form W' x + b' (for batch norm: Ioffe & Szegedy 2015). In
-  // double, so that the weights are rounded once.
+  // a (W x + b) + c is again of the form W' x + b' (for batch norm: Ioffe & Szegedy 2015).
   static bool fold_affine(Step& step, const Step& reader) {
     const std::string_view op = step.op->contract().name;
     if ((op != "conv2d" && op != "linear") || step.residual ||
         step.epilogue.activation.kind != ops::ActivationKind::kNone) {
       return false;
     }
-    const std::optional<ops::ChannelAffine> affine = reader.op->affine(reader.context);
+    std::optional<ops::ChannelAffine> affine = reader.op->affine(reader.context);
     if (!affine) return false;
-    Tensor weight = *step.context.weight("weight");
-    const std::int64_t channels = weight.shape()[0];
-    Tensor bias = step.context.weight("bias") ? *step.context.weight("bias") : Tensor({channels});
-    float* w = weight.mutable_data();
-    float* b = bias.mutable_data();
-    const std::int64_t length = weight.elements() / channels;
-    for (std::int64_t o = 0; o < channels; ++o) {
-      const double factor = affine->factor[static_cast<std::size_t>(o)];
-      for (std::int64_t k = 0; k < length; ++k) {
-        w[o * length + k] = static_cast<float>(static_cast<double>(w[o * length + k]) * factor);
+    if (step.affine) {  // maps one after the other
+      for (std::size_t c = 0; c < affine->factor.size(); ++c) {
+        affine->summand[c] += affine->factor[c] * step.affine->summand[c];
+        affine->factor[c] *= step.affine->factor[c];
       }
-      b[o] = static_cast<float>(static_cast<double>(b[o]) * factor +
-                                affine->summand[static_cast<std::size_t>(o)]);
     }
-    step.context.weights["weight"] = weight;
-    step.context.weights["bias"] = bias;
+    step.affine = std::move(affine);
     return true;
   }
 

@@ -5,12 +5,11 @@
 #include <algorithm>
 #include <numeric>
 
+#include "core/aligned_memory.h"
 #include "engine/plan_state.h"
 
 namespace leadsman::internal {
 namespace {
-
-constexpr std::size_t kAlignment = 64;
 
 struct Life {
   std::size_t first = 0;  // 0: before the first step; s + 1: written by step s
@@ -18,9 +17,8 @@ struct Life {
   std::size_t bytes = 0;
 };
 
-std::size_t aligned_bytes(const Shape& shape) {
-  const auto bytes = static_cast<std::size_t>(shape.elements()) * sizeof(float);
-  return (bytes + kAlignment - 1) / kAlignment * kAlignment;
+std::size_t bytes_of(const Shape& shape) {
+  return aligned_bytes(static_cast<std::size_t>(shape.elements()) * sizeof(float));
 }
 
 // When each value is read for the last time, by storage.
@@ -75,7 +73,7 @@ std::vector<Life> lifetimes(const PlanState& plan) {
       life = {.first = when, .last = std::max(when, last[storage]), .bytes = 0};
       born[storage] = true;
     }
-    life.bytes = std::max(life.bytes, aligned_bytes(plan.values[value].shape));
+    life.bytes = std::max(life.bytes, bytes_of(plan.values[value].shape));
     life.last = std::max(life.last, when);
   };
   for (ValueId input = 0; input < plan.graph.inputs.size(); ++input) extend(input, 0);

@@ -7,6 +7,7 @@
 #include <vector>
 
 #include "leadsman/plan.h"
+#include "ops/channel_affine.h"
 #include "ops/operator.h"
 
 namespace leadsman::internal {
@@ -32,6 +33,7 @@ struct Step {
   ValueId output = 0;
   std::optional<ValueId> residual;
   ops::Epilogue epilogue;
+  std::optional<ops::ChannelAffine> affine;  ///< of the sums: to be folded into the weights
   std::string strategy;
   double rounding_growth = 1.0;  ///< of the strategy
   std::vector<std::string> refusals;

@@ -3,7 +3,7 @@
 #include <algorithm>
 #include <chrono>
 
-#include "core/memory.h"
+#include "core/aligned_memory.h"
 #include "core/threads.h"
 #include "engine/plan_state.h"
 #include "leadsman/error.h"
@@ -13,18 +13,15 @@
 namespace leadsman {
 namespace {
 
-struct FreeBlock {
-  void operator()(std::byte* bytes) const { internal::free_block(bytes); }
-};
-using AlignedBytes = std::unique_ptr<std::byte, FreeBlock>;
+using AlignedBytes = std::unique_ptr<std::byte, FreeAligned>;
 
 AlignedBytes allocate(std::size_t bytes, const char* what) {
-  auto* memory = static_cast<std::byte*>(internal::allocate_block(bytes));
+  AlignedBytes memory = allocate_aligned(bytes);
   if (memory == nullptr) {
     throw Error(ErrorKind::kMemory, std::string("not enough memory for the ") + what + ": " +
                                         std::to_string(bytes) + " bytes");
   }
-  return AlignedBytes(memory);
+  return memory;
 }
 
 using Clock = std::chrono::steady_clock;

@@ -187,13 +187,13 @@ std::string shape_text(const std::vector<std::int64_t>& shape) {
 }
 
 Tensor make_tensor(const ArrayLayout& layout, const std::byte* data,
-                   std::shared_ptr<const void> owner) {
+                   std::shared_ptr<const void> owner, Tensor::Release release) {
   const Shape shape{std::span<const std::int64_t>(layout.info.shape)};
   if (shape.elements() == 0) return Tensor(shape);
   const bool as_it_lies =
       layout.info.type == ElementType::kF32 && !layout.big_endian && !layout.fortran_order;
   if (as_it_lies && reinterpret_cast<std::uintptr_t>(data) % alignof(float) == 0) {
-    return Tensor::borrow(shape, reinterpret_cast<const float*>(data), std::move(owner));
+    return Tensor::borrow(shape, reinterpret_cast<const float*>(data), std::move(owner), release);
   }
   Tensor tensor(shape);
   if (as_it_lies) {

@@ -28,7 +28,7 @@ std::optional<std::int64_t> array_bytes(const TensorInfo& info);
 /// C order that is aligned is borrowed from `owner`; everything else is copied. Throws
 /// Error(kInput) as TensorFile::read says, without the name of tensor or file.
 Tensor make_tensor(const ArrayLayout& layout, const std::byte* data,
-                   std::shared_ptr<const void> owner);
+                   std::shared_ptr<const void> owner, Tensor::Release release = nullptr);
 
 /// "[64, 3, 7, 7]"
 std::string shape_text(const std::vector<std::int64_t>& shape);

@@ -82,6 +82,17 @@ MappedFile::~MappedFile() {
   }
 }
 
+void release_pages(const void* data, std::size_t bytes) {
+  const auto page = static_cast<std::uintptr_t>(::sysconf(_SC_PAGESIZE));
+  const auto address = reinterpret_cast<std::uintptr_t>(data);
+  const std::uintptr_t begin = (address + page - 1) / page * page;
+  const std::uintptr_t end = (address + bytes) / page * page;
+  if (begin >= end) return;
+  // The mapping is private and never written to: what goes is a copy of the file's page.
+  ::madvise(const_cast<std::byte*>(static_cast<const std::byte*>(data)) + (begin - address),
+            end - begin, MADV_DONTNEED);
+}
+
 std::string read_text_file(const std::string& path, std::size_t limit) {
   const std::shared_ptr<const MappedFile> file = MappedFile::open(path);
   const std::span<const std::byte> bytes = file->bytes();

@@ -31,6 +31,10 @@ class MappedFile {
   std::span<const std::byte> bytes_;  ///< empty files are not mapped at all
 };
 
+/// Gives the whole pages of this part of a mapped file back to the system, which reads them again
+/// when they are looked at.
+void release_pages(const void* data, std::size_t bytes);
+
 /// The whole of a small file. Throws as MappedFile::open, and when it is longer than `limit`.
 std::string read_text_file(const std::string& path, std::size_t limit);
 

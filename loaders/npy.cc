@@ -30,7 +30,8 @@ class NpySource : public TensorSource {
   }
 
   Tensor read(std::size_t /*index*/) const override {
-    return make_tensor(header_.layout, file()->bytes().data() + header_.header_bytes, file());
+    return make_tensor(header_.layout, file()->bytes().data() + header_.header_bytes, file(),
+                       release_pages);
   }
 
  private:

@@ -42,7 +42,8 @@ class NpzSource : public TensorSource {
     const std::span<const std::byte> bytes = file()->bytes();
     if (!array.entry.deflated) {
       const std::byte* const at = stored_zip_entry(bytes, array.entry).data();
-      return make_tensor(array.header.layout, at + array.header.header_bytes, file());
+      return make_tensor(array.header.layout, at + array.header.header_bytes, file(),
+                         release_pages);
     }
     const auto unpacked =
         std::make_shared<std::vector<std::byte>>(static_cast<std::size_t>(array.entry.bytes));

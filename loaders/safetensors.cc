@@ -53,7 +53,7 @@ class SafetensorsSource : public TensorSource {
   }
 
   Tensor read(std::size_t index) const override {
-    return make_tensor({info(index), false, false}, data_ + begins_[index], file());
+    return make_tensor({info(index), false, false}, data_ + begins_[index], file(), release_pages);
   }
 
  private:

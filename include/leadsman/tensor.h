@@ -1,6 +1,7 @@
 // Float tensors: owned ones in logical order, and views of activations as they lie in memory.
 #pragma once
 
+#include <cstddef>
 #include <memory>
 #include <span>
 #include <vector>
@@ -20,8 +21,11 @@ class Tensor {
   explicit Tensor(Shape shape);
   /// Throws Error(kInput) when values.size() differs from shape.elements().
   Tensor(Shape shape, std::vector<float> values);
+  /// What release() does with borrowed memory.
+  using Release = void (*)(const void* data, std::size_t bytes);
   /// Borrows memory that `owner` keeps alive (a mapped file, say). `data` is aligned to 4 bytes.
-  static Tensor borrow(Shape shape, const float* data, std::shared_ptr<const void> owner);
+  static Tensor borrow(Shape shape, const float* data, std::shared_ptr<const void> owner,
+                       Release release = nullptr);
 
   const Shape& shape() const { return shape_; }
   std::int64_t elements() const { return shape_.elements(); }
@@ -30,6 +34,9 @@ class Tensor {
     return {data_, static_cast<std::size_t>(data_ ? elements() : 0)};
   }
   float* mutable_data();
+  /// Says that the values will hardly be read again: memory that mirrors a file goes back to the
+  /// system until they are, all other stays. Safe beside readers in other threads.
+  void release() const;
   /// The same values under another shape of as many elements; throws Error(kInput) otherwise.
   Tensor reshaped(Shape shape) const;
 
@@ -38,6 +45,7 @@ class Tensor {
   std::shared_ptr<const void> owner_;
   std::shared_ptr<std::vector<float>> own_;
   const float* data_ = nullptr;
+  Release release_ = nullptr;
 };
 
 /// An activation in memory. Images (rank 4) are stored N, H, W, C; every other rank in logical

@@ -63,7 +63,7 @@ class DepthwiseKernel final : public Kernel {
 
  private:
   std::size_t pointer_bytes() const {
-    return simd::aligned_bytes(static_cast<std::size_t>(g_.kernel_h) * sizeof(const float*));
+    return aligned_bytes(static_cast<std::size_t>(g_.kernel_h) * sizeof(const float*));
   }
   std::size_t worker_bytes() const {
     return pointer_bytes() + simd::aligned_floats_bytes(multiplier_ == 1 ? 0 : g_.out_w * g_.c);

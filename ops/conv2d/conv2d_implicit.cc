@@ -120,8 +120,8 @@ class ImplicitKernel final : public Kernel {
   }
   std::size_t table_bytes() const {
     if (mode_ == Taps::kWholeImage) return 0;
-    return simd::aligned_bytes(static_cast<std::size_t>(taps_ * tasks_.strip_rows) *
-                               sizeof(const float*));
+    return aligned_bytes(static_cast<std::size_t>(taps_ * tasks_.strip_rows) *
+                         sizeof(const float*));
   }
 
   const float* copy_padded(const KernelCall& call) const {

@@ -43,7 +43,8 @@ WinogradWeights::WinogradWeights(const OpContext& context, int tile)
       group_panels_(simd::panel_count(group_out_)),
       cuts_((group_panels_ + kPartPanels - 1) / kPartPanels),
       positions_((tile + 2) * (tile + 2)),
-      packed_(groups_ * group_panels_ * positions_ * panel_floats()),
+      packed_(
+          simd::AlignedFloats::undefined(groups_ * group_panels_ * positions_ * panel_floats())),
       bias_(context.output[1]) {
   if (const Tensor* bias = context.weight("bias")) {
     std::copy_n(bias->data(), context.output[1], bias_.data());

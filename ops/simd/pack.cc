@@ -26,7 +26,8 @@ void pack_panels(const float* weights, std::int64_t out, std::int64_t channels, 
 
 PackedMatrix::PackedMatrix(const float* weights, const float* bias, std::int64_t out,
                            std::int64_t channels, std::int64_t taps)
-    : panels_(panel_count(out) * kPanel * channels * taps), bias_(panel_count(out) * kPanel) {
+    : panels_(AlignedFloats::undefined(panel_count(out) * kPanel * channels * taps)),
+      bias_(panel_count(out) * kPanel) {
   pack_panels(weights, out, channels, taps, panels_.data());
   if (bias != nullptr) std::copy_n(bias, out, bias_.data());
 }

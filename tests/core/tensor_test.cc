@@ -89,6 +89,25 @@ TEST(Tensor, LetsBorrowedMemoryGo) {
   EXPECT_TRUE(watch.expired());
 }
 
+TEST(Tensor, ReleasesBorrowedMemoryAlone) {
+  static const void* released = nullptr;
+  static std::size_t bytes = 0;
+  const auto note = [](const void* data, std::size_t count) {
+    released = data;
+    bytes = count;
+  };
+  const std::vector<float> memory = counting(6);
+  Tensor tensor = Tensor::borrow(Shape{6}, memory.data(), nullptr, note);
+  tensor.release();
+  EXPECT_EQ(released, memory.data());
+  EXPECT_EQ(bytes, 24U);
+  released = nullptr;
+  tensor.mutable_data();  // a copy of its own
+  tensor.release();
+  Tensor(Shape{3}).release();
+  EXPECT_EQ(released, nullptr);
+}
+
 TEST(Tensor, ReshapedSharesItsValues) {
   const Tensor tensor(Shape{2, 6}, counting(12));
   const Tensor other = tensor.reshaped({3, 4});

@@ -10,6 +10,7 @@
 #include <vector>
 
 #include <gtest/gtest.h>
+#include <unistd.h>
 
 #include "loaders/atomic_file.h"
 #include "loaders/npy_header.h"
@@ -202,6 +203,29 @@ TEST(TensorFile, BorrowedTensorsOutliveTheFile) {
   expect_same(kept, expected, "kept");
   kept.mutable_data()[0] = 5;  // copied first: the mapping is read-only
   EXPECT_EQ(kept.data()[0], 5.0f);
+}
+
+// Pages of files that this process has mapped and read: proc(5), /proc/PID/statm, "shared".
+std::int64_t shared_pages() {
+  std::istringstream words(read_file("/proc/self/statm"));
+  std::int64_t size = 0;
+  std::int64_t resident = 0;
+  std::int64_t shared = 0;
+  words >> size >> resident >> shared;
+  return shared;
+}
+
+TEST(TensorFile, ReleasedTensorsLeaveMemoryAndKeepTheirValues) {
+  const ScratchFolder folder;
+  const Tensor written = counted({1 << 20}, 0.5F);  // 1,024 pages of 4 KiB
+  write_tensors(folder / "big.safetensors", {{"a", written}});
+  const Tensor tensor = TensorFile::open(folder / "big.safetensors").read("a");
+  expect_same(tensor, written, "as read");
+  const std::int64_t before = shared_pages();
+  tensor.release();
+  const std::int64_t page = ::sysconf(_SC_PAGESIZE);
+  EXPECT_LE(shared_pages(), before - (4 << 20) / page + 64);
+  expect_same(tensor, written, "as read again");
 }
 
 TEST(TensorFile, RecognisesFormatsByTheirBytes) {
