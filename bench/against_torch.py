@@ -27,7 +27,7 @@ HERE = pathlib.Path(__file__).resolve().parent
 MODELS = ["resnet18", "resnet50", "vgg16", "mobilenet_v2", "vit_b_16", "buttons-conv", "buttons-vit"]
 AGREEMENT = 2e-4  # of the outputs' relative L2 difference
 TURN_SECONDS = 0.25
-SEARCH_SECONDS = 1.5  # of one form, while the fastest one is looked for
+SEARCH_SECONDS = 0.8  # of one form, while the fastest one is looked for
 REST_SECONDS = 0.02  # idle threads of either side stop spinning meanwhile
 
 
