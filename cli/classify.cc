@@ -6,6 +6,7 @@
 #include <nlohmann/json.hpp>
 
 #include "commands.h"
+#include "inputs_ahead.h"
 #include "leadsman/error.h"
 #include "leadsman/runner.h"
 #include "leadsman/tensor_file.h"
@@ -76,13 +77,15 @@ class Classifier {
     for (const std::string& picture : pictures) {
       width_ = std::max(width_, std::min<std::size_t>(picture.size(), 48));
     }
+    const int threads = options_.model.plan_options(model_).threads;
+    InputsAhead inputs(pictures, settings, threads > 0 ? threads : available_cpus());
     Progress progress("picture");
     std::size_t bad = 0;
     for (std::size_t i = 0; i < pictures.size(); ++i) {
       if (pictures.size() > 1) progress.show(i + 1, pictures.size());
       Tensor input;
       try {
-        input = preprocess(read_picture(pictures[i], settings.orientation), settings);
+        input = inputs.next();
       } catch (const Error& error) {
         if (error.kind() != ErrorKind::kInput) throw;
         progress.clear();

@@ -1,4 +1,4 @@
-// The only place that starts threads.
+// Starts the threads that compute.
 //
 // A caller of parallel_for() borrows a team: threads that help it, kept from call to call. Teams
 // never share work, so several callers may run at once; each has a team of its own meanwhile.

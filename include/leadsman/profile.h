@@ -25,6 +25,10 @@ struct Profile {
 /// instruction set in use: the best of some 20 ms.
 double measure_peak(int threads);
 
+/// CPUs that this process may use (affinity mask, containers' quota), at least 1: what `threads =
+/// 0` stands for.
+int available_cpus();
+
 /// The instruction set in use: "avx512", "avx2", "sse4", "neon" or "portable".
 std::string instruction_set();
 
