@@ -15,6 +15,7 @@ Command add_classify(CLI::App& app);
 Command add_tap(CLI::App& app);
 Command add_verify(CLI::App& app);
 Command add_time(CLI::App& app);
+Command add_sweep(CLI::App& app);
 Command add_import(CLI::App& app);
 
 }  // namespace leadsman::cli

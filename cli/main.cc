@@ -38,6 +38,7 @@ int main(int argc, char** argv) {
   add(leadsman::cli::add_tap);
   add(leadsman::cli::add_verify);
   add(leadsman::cli::add_time);
+  add(leadsman::cli::add_sweep);
   add(leadsman::cli::add_import);
 
   try {

@@ -152,6 +152,19 @@ void Progress::show(std::size_t done, std::size_t total) {
   dirty_ = true;
 }
 
+void Progress::show_share(double share) {
+  if (!visible_) return;
+  const std::chrono::duration<double> spent = std::chrono::steady_clock::now() - begin_;
+  std::cerr << "\r\x1b[K" << what_ << ' ' << fixed(100.0 * share, 0) << " %";
+  if (share > 0.0 && share < 1.0) {
+    const double left = spent.count() * (1.0 - share) / share;
+    std::cerr << ", about "
+              << (left < 90.0 ? fixed(left, 0) + " s" : fixed(left / 60.0, 0) + " min") << " left";
+  }
+  std::cerr << std::flush;
+  dirty_ = true;
+}
+
 void Progress::clear() {
   if (dirty_) std::cerr << "\r\x1b[K" << std::flush;
   dirty_ = false;

@@ -1,6 +1,7 @@
 // Text for people: numbers, tables, and what the terminal can show.
 #pragma once
 
+#include <chrono>
 #include <cstdint>
 #include <iosfwd>
 #include <string>
@@ -66,11 +67,14 @@ class Progress {
   explicit Progress(std::string what);
   ~Progress();
   void show(std::size_t done, std::size_t total);
+  /// `share` in [0, 1] of the work, and the time left at the pace so far.
+  void show_share(double share);
   /// Clears the line, so that a message can be written in its place.
   void clear();
 
  private:
   std::string what_;
+  std::chrono::steady_clock::time_point begin_ = std::chrono::steady_clock::now();
   bool visible_;
   bool dirty_ = false;
 };

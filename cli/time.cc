@@ -7,6 +7,7 @@
 #include "commands.h"
 #include "leadsman/error.h"
 #include "leadsman/runner.h"
+#include "leadsman/sweep.h"
 #include "leadsman/tensor_file.h"
 #include "options.h"
 #include "profile_text.h"
@@ -27,17 +28,6 @@ struct TimeOptions {
 };
 
 using Json = nlohmann::ordered_json;
-
-// Values in [-1, 1) without a pattern: what they are does not matter to the time.
-Tensor filler(const Shape& shape) {
-  Tensor tensor(shape);
-  std::uint32_t state = 1;
-  for (std::int64_t i = 0; i < shape.elements(); ++i) {
-    state = state * 1664525U + 1013904223U;  // Numerical Recipes' generator
-    tensor.mutable_data()[i] = static_cast<float>(state >> 8) * 0x1p-23F - 1.0F;
-  }
-  return tensor;
-}
 
 class Timer {
  public:

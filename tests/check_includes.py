@@ -1,7 +1,7 @@
 #!/usr/bin/env python3
 """Checks that includes follow the architecture's one direction, and that files stay short.
 
-    core <- ops <- engine <- {loaders, observe} <- cli
+    core <- ops <- engine <- {loaders, observe, measure} <- cli
 
 Usage: check_includes.py [--root FOLDER] | --self-test
 
@@ -21,12 +21,14 @@ ROOMS = {
     "engine": {"core", "ops", "engine"},
     "loaders": {"core", "ops", "engine", "loaders"},
     "observe": {"observe"},
+    "measure": {"core", "measure"},  # threads for the bandwidth of all cores
 }
 # Rooms whose public headers each may include, where that differs from ROOMS.
 PUBLIC = {
     "observe": {"core", "engine", "observe"},
-    "cli": {"core", "engine", "loaders", "observe"},
-    "examples": {"core", "engine", "loaders", "observe"},
+    "measure": {"core", "engine", "measure"},
+    "cli": {"core", "engine", "loaders", "observe", "measure"},
+    "examples": {"core", "engine", "loaders", "observe", "measure"},
 }
 # Single headers beyond that, with the reason: maps are drawn over pictures and are pictures; a
 # picture's way to the input is compared as layers are.
@@ -37,6 +39,7 @@ HEADERS = {
     "engine": ["graph", "hooks", "plan", "profile", "runner"],
     "loaders": ["architectures", "bundle", "picture", "preprocess", "tensor_file"],
     "observe": ["capture", "compare", "compare_picture", "maps"],
+    "measure": ["board", "growth", "statistics", "sweep", "sweep_report"],
 }
 ROOM_OF_HEADER = {name: room for room, names in HEADERS.items() for name in names}
 
@@ -45,7 +48,7 @@ LIBRARIES = {
     "thread": ["core/threads.cc", "tests/"],
     "hwy/": ["ops/simd/", "tests/ops/simd/"],
     "CLI/": ["cli/"],
-    "nlohmann/": ["loaders/", "observe/", "cli/", "examples/", "tests/", "bench/"],
+    "nlohmann/": ["loaders/", "observe/", "measure/", "cli/", "examples/", "tests/", "bench/"],
     "stb/": ["loaders/"],
     "gtest/": ["tests/"],
     "gmock/": ["tests/"],
@@ -146,6 +149,8 @@ def self_test():
         "loaders/d2.cc": '#include "observe/threshold.h"\n',
         "observe/e.cc": '#include "ops/operator.h"\n',
         "observe/e2.cc": '#include "leadsman/bundle.h"\n',
+        "measure/i.cc": '#include "engine/plan_state.h"\n',
+        "measure/i2.cc": '#include "leadsman/bundle.h"\n',
         "observe/e3.cc": '#include "engine/plan_state.h"\n',
         "cli/f.cc": '#include "core/threads.h"\n',
         "examples/embed/g.cc": '#include "engine/plan_state.h"\n',
@@ -162,6 +167,7 @@ def self_test():
         "engine/a.cc": '#include "core/threads.h"\n#include "ops/operator.h"\n',
         "loaders/a.cc": '#include "leadsman/graph.h"\n#include <stb/stb_image.h>\n',
         "observe/a.cc": '#include "leadsman/runner.h"\n#include "observe/threshold.h"\n',
+        "measure/a.cc": '#include "core/threads.h"\n#include "leadsman/plan.h"\n',
         "observe/b.cc": '#include "leadsman/picture.h"\n',
         "cli/a.cc": '#include "leadsman/bundle.h"\n#include "options.h"\n#include <CLI/CLI.hpp>\n',
         "tests/engine/a.cc": '#include "engine/plan_state.h"\n#include <gtest/gtest.h>\n',
