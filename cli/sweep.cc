@@ -28,6 +28,7 @@ struct SweepCommandOptions {
   std::string memory;
   std::string baseline;
   std::string csv;
+  std::string html;
   bool json = false;
   bool resident = false;
 
@@ -179,6 +180,7 @@ int run(const SweepCommandOptions& options) {
 
   const std::string json = sweep_json(report);
   if (!options.csv.empty()) write_text(options.csv, sweep_csv(report));
+  if (!options.html.empty()) write_text(options.html, sweep_page(json));
   if (options.json) {
     std::cout << json;
   } else {
@@ -227,12 +229,13 @@ Command add_sweep(CLI::App& app) {
       ->type_name("FILE");
   command->add_option("--csv", options->csv, "Also write a table of all figures")
       ->type_name("FILE");
+  command->add_option("--html", options->html, "Also write a page with charts")->type_name("FILE");
   command->add_flag("--json", options->json, "Print one JSON object");
   // How sweep measures the memory of a process that does nothing else.
   command->add_flag("--resident", options->resident)->group("");
   command->footer(
       "Example: leadsman sweep examples/buttons/bundles/conv examples/buttons/bundles/vit \\\n"
-      "             --sizes 64:192:32 --threads 1,2 --budget 5ms@p99");
+      "             --sizes 64:192:32 --threads 1 --budget 5ms@p99 --html sweep.html");
   return [options] { return run(*options); };
 }
 

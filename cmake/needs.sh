@@ -36,6 +36,8 @@ needs_build="cmake ninja-build g++ libhwy-dev nlohmann-json3-dev libstb-dev libc
 # What their tests need beside that.
 needs_tests="libgtest-dev python3 python3-torch python3-torchvision python3-numpy python3-pil"
 needs_tests="$needs_tests python3-scipy python3-sklearn python3-jsonschema"
+# The page of a sweep is looked at by a browser.
+needs_tests="$needs_tests python3-selenium chromium-driver"
 # Without it Debian's PyTorch multiplies matrices with the reference BLAS, some twenty times slower.
 needs_tests="$needs_tests libopenblas0-openmp"
 # The cross build for Arm boards, and what runs it here.

@@ -1,4 +1,4 @@
-// A sweep written down: JSON for programs, CSV for spreadsheets.
+// A sweep written down: JSON for programs, CSV for spreadsheets, one page for people.
 #pragma once
 
 #include <string>
@@ -21,6 +21,8 @@ struct SweepReport {
 std::string sweep_json(const SweepReport& report);
 /// One row a point: the scalar members of the JSON's "points", spelled as there.
 std::string sweep_csv(const SweepReport& report);
+/// One self-contained page of HTML; every figure on it is one of `json`, which sweep_json() wrote.
+std::string sweep_page(const std::string& json);
 
 /// The points of a JSON that sweep_json() wrote, with what compare_sweeps() needs: names and times.
 /// Throws Error(kInput) naming `file_name` and the place in it.
