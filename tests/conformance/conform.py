@@ -138,6 +138,7 @@ def conform(tool, name, size=None):
     folder = pathlib.Path(tempfile.mkdtemp(prefix=f"leadsman-{name}-"))
     try:
         expected = export_torchvision(name, folder, size)
+        gc.collect()  # a traced module is full of cycles, and may be of gigabytes
         at_size = ["--size", size] if size else []
         described = run_json(tool, "describe", folder, "--json", *at_size)
         exact, fast = (
@@ -146,7 +147,6 @@ def conform(tool, name, size=None):
         )
     finally:
         shutil.rmtree(folder)
-        gc.collect()  # a traced module is full of cycles
     nearest = max((exact, fast), key=lambda verified: finite(verified["worst_ratio"]))
     return Result(
         architecture=name,
