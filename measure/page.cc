@@ -322,7 +322,8 @@ class Page {
   std::string budget() const {
     if (document_["budget"].is_null()) return "";
     std::string html =
-        "<h2>Budget</h2><table><tr><th>model<th>threads<th>largest size (0: none fits)<th>why not more";
+        "<h2>Budget</h2><table><tr><th>model<th>threads<th>largest size (0: none fits)<th>why not "
+        "more";
     const Json& verdicts = document_["budget"]["verdicts"];
     for (std::size_t i = 0; i < verdicts.size(); ++i) {
       const std::string path = "/budget/verdicts/" + std::to_string(i);
