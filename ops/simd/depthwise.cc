@@ -3,15 +3,8 @@
 #include <algorithm>
 #include <utility>
 
+#include "ops/simd/unroll.h"
 #include "ops/simd/wanted_targets.h"
-
-#ifndef LEADSMAN_UNROLL
-#if defined(__clang__)
-#define LEADSMAN_UNROLL _Pragma("clang loop unroll(full)")
-#else
-#define LEADSMAN_UNROLL _Pragma("GCC unroll 16")
-#endif
-#endif
 
 #undef HWY_TARGET_INCLUDE
 #define HWY_TARGET_INCLUDE "ops/simd/depthwise.cc"

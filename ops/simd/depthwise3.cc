@@ -6,15 +6,8 @@
 #include <utility>
 
 #include "ops/simd/activation.h"
+#include "ops/simd/unroll.h"
 #include "ops/simd/wanted_targets.h"
-
-#ifndef LEADSMAN_UNROLL
-#if defined(__clang__)
-#define LEADSMAN_UNROLL _Pragma("clang loop unroll(full)")
-#else
-#define LEADSMAN_UNROLL _Pragma("GCC unroll 16")
-#endif
-#endif
 
 #undef HWY_TARGET_INCLUDE
 #define HWY_TARGET_INCLUDE "ops/simd/depthwise3.cc"
@@ -35,7 +28,7 @@ constexpr auto kLanes = static_cast<std::int64_t>(hn::MaxLanes(D()));
 constexpr int kTileRows = 2;
 
 // Which columns of a tile's input are outside the image.
-enum class Edge { kNone, kFirst, kLast, kBoth, kAny };
+enum class Edge { kNone, kFirst, kLast, kAny };
 
 struct Tile {
   const Depthwise3& call;
@@ -70,8 +63,8 @@ HWY_INLINE void add_line(const float* line, std::int64_t stride, std::int64_t x,
   constexpr int kLast = static_cast<int>(sizeof...(kX)) - 1;
   const auto column = [&](auto index) HWY_ATTR {
     constexpr int kColumn = decltype(index)::value;
-    if constexpr (kColumn == 0 && (kEdge == Edge::kFirst || kEdge == Edge::kBoth)) return;
-    if constexpr (kColumn == kLast && (kEdge == Edge::kLast || kEdge == Edge::kBoth)) return;
+    if constexpr (kColumn == 0 && kEdge == Edge::kFirst) return;
+    if constexpr (kColumn == kLast && kEdge == Edge::kLast) return;
     if (kEdge == Edge::kAny && (x + kColumn < 0 || x + kColumn >= input_w)) return;
     add_pixel<kStride, kRows, kPixels, kLine, kColumn>(hn::LoadU(d, line + kColumn * stride),
                                                        weights, sums);
@@ -149,11 +142,12 @@ void run_tile(const Tile& tile) {
   const std::int64_t x = tile.call.first_x + tile.pixel * kStride;
   const std::int64_t before = std::max<std::int64_t>(0, -x);
   const std::int64_t behind = std::max<std::int64_t>(0, x + kColumns - tile.call.input_w);
-  if (before > 1 || behind > 1) return run_tile<kStride, kRows, kPixels, Edge::kAny>(tile);
   if (before + behind == 0) return run_tile<kStride, kRows, kPixels, Edge::kNone>(tile);
-  if (behind == 0) return run_tile<kStride, kRows, kPixels, Edge::kFirst>(tile);
-  if (before == 0) return run_tile<kStride, kRows, kPixels, Edge::kLast>(tile);
-  run_tile<kStride, kRows, kPixels, Edge::kBoth>(tile);
+  if constexpr (kRows == kTileRows) {  // single rows are rare: no copies for them
+    if (before == 1 && behind == 0) return run_tile<kStride, kRows, kPixels, Edge::kFirst>(tile);
+    if (before == 0 && behind == 1) return run_tile<kStride, kRows, kPixels, Edge::kLast>(tile);
+  }
+  run_tile<kStride, kRows, kPixels, Edge::kAny>(tile);
 }
 
 template <int kStride, int kRows>

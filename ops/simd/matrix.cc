@@ -8,18 +8,11 @@
 
 #include "ops/simd/activation.h"
 #include "ops/simd/pack.h"
+#include "ops/simd/unroll.h"
 #include "ops/simd/wanted_targets.h"
 
 // Loops over a register tile must be unrolled in full: one index known only at run time would
 // spill the whole tile.
-#ifndef LEADSMAN_UNROLL
-#if defined(__clang__)
-#define LEADSMAN_UNROLL _Pragma("clang loop unroll(full)")
-#else
-#define LEADSMAN_UNROLL _Pragma("GCC unroll 16")
-#endif
-#endif
-
 #undef HWY_TARGET_INCLUDE
 #define HWY_TARGET_INCLUDE "ops/simd/matrix.cc"
 #include "hwy/foreach_target.h"

@@ -5,6 +5,7 @@
 
 #include "ops/conv2d/winograd.h"
 #include "ops/simd/activation.h"
+#include "ops/simd/unroll.h"
 #include "ops/simd/wanted_targets.h"
 
 #undef HWY_TARGET_INCLUDE
@@ -13,14 +14,6 @@
 #include "hwy/highway.h"
 #include "ops/simd/activation-inl.h"
 #include "ops/simd/math-inl.h"
-
-#ifndef LEADSMAN_UNROLL
-#if defined(__clang__)
-#define LEADSMAN_UNROLL _Pragma("clang loop unroll(full)")
-#else
-#define LEADSMAN_UNROLL _Pragma("GCC unroll 16")
-#endif
-#endif
 
 HWY_BEFORE_NAMESPACE();
 namespace leadsman::ops::simd::HWY_NAMESPACE {
