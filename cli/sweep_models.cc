@@ -15,6 +15,7 @@
 #include "leadsman/architectures.h"
 #include "leadsman/bundle.h"
 #include "leadsman/error.h"
+#include "leadsman/names.h"
 #include "leadsman/runner.h"
 
 namespace leadsman::cli {
@@ -86,7 +87,12 @@ std::optional<std::string> output_of(std::vector<std::string> arguments) {
 
 SweepModel load_sweep_model(const std::string& argument) {
   const std::vector<std::string> names = architecture_names();
-  if (!std::filesystem::exists(argument) && std::ranges::find(names, argument) != names.end()) {
+  if (!std::filesystem::exists(argument)) {
+    if (std::ranges::find(names, argument) == names.end()) {
+      const std::string nearest = nearest_name(argument, names);
+      throw_input(argument + ": neither a bundle nor an architecture" +
+                  (nearest.empty() ? "" : "; nearest: '" + nearest + "'"));
+    }
     const Architecture built = build_architecture(argument);
     return {argument, built.graph, seeded_weights(built, 1)};
   }

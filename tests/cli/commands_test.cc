@@ -15,13 +15,13 @@ namespace leadsman {
 namespace {
 
 using nlohmann::json;
+using testing::kButtons;
+using testing::kConv;
+using testing::kVit;
 using testing::run_tool;
 using testing::ScratchFolder;
 using testing::ToolResult;
 
-const std::string kButtons = std::string(LEADSMAN_SOURCE_DIR) + "/examples/buttons";
-const std::string kConv = kButtons + "/bundles/conv";
-const std::string kVit = kButtons + "/bundles/vit";
 const std::string kOrdinary = kButtons + "/pictures/ordinary";
 
 std::string some_picture() {

@@ -10,17 +10,17 @@ namespace leadsman {
 namespace {
 
 using nlohmann::json;
+using testing::kConv;
+using testing::kVit;
 using testing::read_file;
 using testing::run_tool;
 using testing::ScratchFolder;
 using testing::ToolResult;
 using testing::write_file;
 
-const std::string kBundles = std::string(LEADSMAN_SOURCE_DIR) + "/examples/buttons/bundles/";
-
 std::vector<std::string> small_sweep(const std::vector<std::string>& more) {
-  std::vector<std::string> arguments{"sweep",    kBundles + "conv", kBundles + "vit/", "--sizes",
-                                     "32:64:16", "--threads=1",     "--repeat",        "5"};
+  std::vector<std::string> arguments{"sweep",    kConv,         kVit + "/", "--sizes",
+                                     "32:64:16", "--threads=1", "--repeat", "5"};
   arguments.insert(arguments.end(), more.begin(), more.end());
   return arguments;
 }
@@ -101,7 +101,7 @@ TEST(Sweep, KeepsWhatWasMeasuredWhenInterrupted) {
   const ScratchFolder folder;
   // Far more sizes than there is time for; SIGINT comes while they are measured.
   const std::string command = std::string("timeout -s INT 6 ") + LEADSMAN_TOOL + " sweep " +
-                              testing::shell_quoted(kBundles + "conv") +
+                              testing::shell_quoted(kConv) +
                               " --sizes 32:4096:1 --threads 1 --repeat 3 --json >" +
                               (folder / "out") + " 2>" + (folder / "err");
   std::system(command.c_str());
@@ -117,16 +117,19 @@ TEST(Sweep, RefusesWhatItCannotMeasure) {
     EXPECT_EQ(result.exit_code, 2) << result.err;
     return result.err;
   };
-  const std::string conv = kBundles + "conv";
-  EXPECT_NE(error_of({"sweep", conv, "--sizes", "96:64"}).find("--sizes"), std::string::npos);
-  EXPECT_NE(error_of({"sweep", conv, "--sizes", "a"}).find("'a'"), std::string::npos);
-  EXPECT_NE(error_of({"sweep", conv, "--sizes", "32:64:0"}).find("'0'"), std::string::npos);
-  EXPECT_NE(error_of({"sweep", conv, "--threads", "0"}).find("--threads"), std::string::npos);
-  EXPECT_NE(error_of({"sweep", conv, "--cpus", "4000"}).find("CPU"), std::string::npos);
-  EXPECT_NE(error_of({"sweep", conv, "--cpus", "3-1"}).find("--cpus"), std::string::npos);
-  EXPECT_NE(error_of({"sweep", conv, "--budget", "fast"}).find("'fast'"), std::string::npos);
-  EXPECT_NE(error_of({"sweep", conv, conv}).find("twice"), std::string::npos);
-  EXPECT_EQ(run_tool({"sweep", "no_such_model"}).exit_code, 3);
+  EXPECT_NE(error_of({"sweep", kConv, "--sizes", "96:64"}).find("--sizes"), std::string::npos);
+  EXPECT_NE(error_of({"sweep", kConv, "--sizes", "a"}).find("'a'"), std::string::npos);
+  EXPECT_NE(error_of({"sweep", kConv, "--sizes", "32:64:0"}).find("'0'"), std::string::npos);
+  EXPECT_NE(error_of({"sweep", kConv, "--threads", "0"}).find("--threads"), std::string::npos);
+  EXPECT_NE(error_of({"sweep", kConv, "--cpus", "4000"}).find("CPU"), std::string::npos);
+  EXPECT_NE(error_of({"sweep", kConv, "--cpus", "3-1"}).find("--cpus"), std::string::npos);
+  EXPECT_NE(error_of({"sweep", kConv, "--budget", "fast"}).find("'fast'"), std::string::npos);
+  EXPECT_NE(error_of({"sweep", kConv, kConv}).find("twice"), std::string::npos);
+  const ToolResult unknown = run_tool({"sweep", "resnet8"});
+  EXPECT_EQ(unknown.exit_code, 3);
+  EXPECT_NE(unknown.err.find("resnet8: neither a bundle nor an architecture; nearest: 'resnet18'"),
+            std::string::npos)
+      << unknown.err;
 }
 
 }  // namespace

@@ -11,12 +11,12 @@ namespace leadsman {
 namespace {
 
 using nlohmann::json;
+using testing::kButtons;
+using testing::kConv;
 using testing::run_tool;
 using testing::ScratchFolder;
 using testing::ToolResult;
 
-const std::string kButtons = std::string(LEADSMAN_SOURCE_DIR) + "/examples/buttons";
-const std::string kConv = kButtons + "/bundles/conv";
 const std::string kPicture = kButtons + "/pictures/odd/walnut_shield_14.jpg";
 
 std::vector<std::string> lines_of(const std::string& text) {

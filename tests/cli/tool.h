@@ -11,6 +11,10 @@
 
 namespace leadsman::testing {
 
+inline const std::string kButtons = std::string(LEADSMAN_SOURCE_DIR) + "/examples/buttons";
+inline const std::string kConv = kButtons + "/bundles/conv";
+inline const std::string kVit = kButtons + "/bundles/vit";
+
 struct ToolResult {
   int exit_code = -1;  ///< 128 + signal when it was killed
   std::string out;

@@ -12,12 +12,12 @@ namespace leadsman {
 namespace {
 
 using nlohmann::json;
+using testing::kButtons;
+using testing::kConv;
 using testing::run_tool;
 using testing::ScratchFolder;
 using testing::ToolResult;
 
-const std::string kButtons = std::string(LEADSMAN_SOURCE_DIR) + "/examples/buttons";
-const std::string kConv = kButtons + "/bundles/conv";
 const std::string kJpeg = kButtons + "/pictures/odd/walnut_shield_14.jpg";
 const std::string kPng = kButtons + "/pictures/ordinary/brass_shield_00.png";
 
