@@ -11,10 +11,10 @@
 namespace leadsman {
 namespace {
 
-constexpr std::int64_t kLargestSide = 32768;
+constexpr std::int64_t kLargestSize = 32768;
 
 bool is_side(std::int64_t side) {
-  return side >= 1 && side <= kLargestSide;
+  return side >= 1 && side <= kLargestSize;
 }
 
 std::string shown(const PictureSize& size) {
@@ -24,7 +24,7 @@ std::string shown(const PictureSize& size) {
 void check_size(const char* field, const PictureSize& size) {
   if (is_side(size.height) && is_side(size.width)) return;
   throw_input(std::string(field) + " is " + shown(size) + ", wants sizes in 1.." +
-              std::to_string(kLargestSide));
+              std::to_string(kLargestSize));
 }
 
 void check_values(const char* field, const std::vector<double>& values, int channels) {
@@ -117,7 +117,7 @@ PictureSize resized_unchecked(const Preprocess& preprocess, const PictureSize& p
 
 std::int64_t scaled(std::int64_t side, double factor) {
   const double value = std::round(static_cast<double>(side) * factor);
-  return static_cast<std::int64_t>(std::clamp(value, 1.0, static_cast<double>(kLargestSide)));
+  return static_cast<std::int64_t>(std::clamp(value, 1.0, static_cast<double>(kLargestSize)));
 }
 
 }  // namespace
@@ -125,7 +125,7 @@ std::int64_t scaled(std::int64_t side, double factor) {
 Preprocess Preprocess::at_size(std::int64_t height, std::int64_t width) const {
   if (!is_side(height) || !is_side(width)) {
     throw_usage("a size of " + std::to_string(height) + "x" + std::to_string(width) +
-                ", wants 1.." + std::to_string(kLargestSide));
+                ", wants 1.." + std::to_string(kLargestSize));
   }
   check_preprocess(*this);
   Preprocess other = *this;
@@ -145,9 +145,9 @@ Preprocess Preprocess::at_size(std::int64_t height, std::int64_t width) const {
 }
 
 void check_preprocess(const Preprocess& preprocess) {
-  if (preprocess.shorter_side < 0 || preprocess.shorter_side > kLargestSide) {
+  if (preprocess.shorter_side < 0 || preprocess.shorter_side > kLargestSize) {
     throw_input("shorter_side is " + std::to_string(preprocess.shorter_side) + ", wants 1.." +
-                std::to_string(kLargestSide));
+                std::to_string(kLargestSize));
   }
   if (preprocess.shorter_side > 0 && preprocess.exact) {
     throw_input("resize has both shorter_side and exact");

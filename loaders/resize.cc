@@ -29,7 +29,7 @@ double cubic(double x) {
   return 0.0;
 }
 
-std::uint8_t to_byte(std::int32_t sum) {
+std::uint8_t rounded_byte(std::int32_t sum) {
   return static_cast<std::uint8_t>(std::clamp(sum >> kFractionBits, 0, 255));
 }
 
@@ -121,9 +121,9 @@ Picture resize_columns(const Picture& picture, const Taps& taps, std::int64_t wi
         green += from[1] * weight;
         blue += from[2] * weight;
       }
-      to[0] = to_byte(red);
-      to[1] = to_byte(green);
-      to[2] = to_byte(blue);
+      to[0] = rounded_byte(red);
+      to[1] = rounded_byte(green);
+      to[2] = rounded_byte(blue);
     }
   }
   return resized;
@@ -145,7 +145,8 @@ Picture resize_rows(const Picture& rows, const Taps& taps, std::int64_t height,
       for (std::int64_t i = 0; i < bytes; ++i) sum[i] += from[i] * weight;
     }
     std::uint8_t* to = resized.rgb.data() + y * bytes;
-    for (std::int64_t i = 0; i < bytes; ++i) to[i] = to_byte(sums[static_cast<std::size_t>(i)]);
+    for (std::int64_t i = 0; i < bytes; ++i)
+      to[i] = rounded_byte(sums[static_cast<std::size_t>(i)]);
   }
   return resized;
 }

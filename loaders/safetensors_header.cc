@@ -14,7 +14,7 @@
 namespace leadsman::loaders {
 namespace {
 
-constexpr std::size_t kMaxSizes = 32;  // of one shape; more is taken for an attack on memory
+constexpr std::size_t kMostAxes = 32;  // of one shape; more is taken for an attack on memory
 constexpr std::string_view kMetadataKey = "__metadata__";
 
 constexpr std::array kElementTypes = {
@@ -44,7 +44,7 @@ class HeaderReader {
       return fail("the number " + std::to_string(value) + " in " + field_ + " is too big");
     }
     std::vector<std::int64_t>& list = field_ == "shape" ? entry_.info.shape : offsets_;
-    const std::size_t most = field_ == "shape" ? kMaxSizes : 2;
+    const std::size_t most = field_ == "shape" ? kMostAxes : 2;
     if (list.size() == most) {
       return fail(field_ + " has more than " + std::to_string(most) + " numbers");
     }
